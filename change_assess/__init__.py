@@ -1,0 +1,1 @@
+"""Area of land change and map accuracy from a probability sample."""

@@ -1,0 +1,135 @@
+"""From an estimate to limits. Methods are plain functions, chosen by name.
+
+================  ===================================================================================================
+``normal``        value ± z · SE. Promises its level in large samples only; with rare change and few errors seen it
+                  fails badly. Always reproducible by hand, hence kept beside every other method.
+``t``             the same with Student's t and the design's degrees of freedom.
+``exact``         one stratum, yes/no labels, equal areas, element sampling: limits by inverting the binomial
+                  (Clopper & Pearson 1934) or, with the finite population correction, the hypergeometric
+                  distribution. Coverage is never below the level.
+``simulated``     measures that hang on a |.| or min near its kink: quantiles over simulated samples.
+================  ===================================================================================================
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from typing import Any, NamedTuple
+
+import numpy as np
+from scipy import special, stats
+
+from change_assess.engine.cells import Cells, Floats
+from change_assess.engine.design import Design
+from change_assess.errors import InputError
+
+DRAWS = 2000
+"""Simulated samples behind a ``simulated`` interval."""
+
+
+class Interval(NamedTuple):
+    """Limits of an estimate."""
+
+    lower: float
+    upper: float
+    level: float = 0.95
+    method: str = "normal"
+
+
+def check_level(level: float) -> float:
+    """Return `level` if it is a confidence level in (0.5, 1); else refuse it."""
+    if not 0.5 < level < 1:
+        raise InputError(
+            f"the confidence level {level:g} is not between 0.5 and 1", value=level, mend="Use 0.95 or 0.90."
+        )
+    return level
+
+
+def normal(value: Floats, se: Floats, df: Floats, level: float) -> tuple[Floats, Floats]:
+    """Normal limits; not clipped to the range of the measure."""
+    half = stats.norm.ppf(0.5 + level / 2) * se
+    return value - half, value + half
+
+
+def student_t(value: Floats, se: Floats, df: Floats, level: float) -> tuple[Floats, Floats]:
+    """Limits by Student's t; without any degree of freedom there are none."""
+    known = np.asarray(df, float) > 0
+    half = np.where(known, stats.t.ppf(0.5 + level / 2, np.where(known, df, 1.0)), np.nan) * se
+    return value - half, value + half
+
+
+METHODS: dict[str, Callable[[Floats, Floats, Floats, float], tuple[Floats, Floats]]] = {
+    "normal": normal,
+    "t": student_t,
+}
+
+
+def exact(x: Floats, n: Floats, population: Floats | None, level: float) -> tuple[Floats, Floats]:
+    """Exact limits for a proportion seen as `x` of `n`, both tails at (1 - level) / 2.
+
+    Parameters
+    ----------
+    x, n : ndarray of float holding whole numbers, same shape
+    population : ndarray or None
+        Units in the stratum; None for sampling with replacement or an infinite stratum.
+
+    Returns
+    -------
+    lower, upper : ndarray
+        Clopper & Pearson (1934) without `population`; with it, the smallest and largest share whose hypergeometric
+        tail beyond the observed count still exceeds (1 - level) / 2.
+    """
+    x, n = np.broadcast_arrays(np.asarray(x, float), np.asarray(n, float))
+    tail = (1 - level) / 2
+    if population is None:
+        with np.errstate(invalid="ignore"):
+            lower = np.where(x > 0, special.betaincinv(np.maximum(x, 1), n - x + 1, tail), 0.0)
+            upper = np.where(x < n, special.betaincinv(x + 1, np.maximum(n - x, 1), 1 - tail), 1.0)
+        return lower, upper
+    size = np.broadcast_to(np.asarray(population, float), x.shape)
+    lower = _first(lambda m: stats.hypergeom.sf(x - 1, size, m, n) > tail, x, size - (n - x))
+    upper = size - _first(lambda m: stats.hypergeom.sf(n - x - 1, size, m, n) > tail, n - x, size - x)
+    return np.asarray(lower / size), np.asarray(upper / size)
+
+
+def _first(accepts: Callable[[Floats], Any], low: Floats, high: Floats) -> Floats:
+    """Smallest whole number in [low, high] that a predicate, false then true, accepts; by bisection."""
+    low, high = np.array(low, float), np.array(high, float)
+    while np.any(low < high):
+        middle = np.floor((low + high) / 2)
+        good = accepts(middle)
+        high = np.where(good, middle, high)
+        low = np.where(good, low, np.minimum(middle + 1, high))
+    return low
+
+
+def simulated_counts(design: Design, cells: Cells, rng: np.random.Generator, draws: int = DRAWS) -> Floats:
+    """Counts of simulated samples, shape (draws, c), whose totals vary as the design's totals do.
+
+    Every primary unit gets a random multiplier of mean one: a Dirichlet law within its stratum (Rubin 1981, the
+    Bayesian bootstrap), its concentration set so that the variance of a total equals the design's first-stage
+    estimate, (1 - f) m/(m - 1) times the centred sum of squares. A stratum wholly sampled does not vary.
+    """
+    group = cells.stratum if cells.psu is None else cells.psu
+    weight = cells.count if cells.psu is None else np.ones(len(cells))
+    stratum = cells.stratum if design.M is None or design.cluster_stratum is None else design.cluster_stratum
+    size = design.primary_count(cells)
+    factor = np.nan_to_num(design.first_stage_factor(cells))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        shape = np.where(factor > 0, np.clip((size / factor - 1) / size, 0.02, None), np.inf)
+    units = cells.count if cells.psu is None else np.ones(len(stratum))
+    rate = shape[stratum] * units
+    fixed = ~np.isfinite(rate)
+    gamma = rng.standard_gamma(np.where(fixed, 1.0, rate), size=(draws, len(rate)))
+    gamma[:, fixed] = units[fixed]
+    total = np.stack([np.bincount(stratum, g, minlength=len(size)) for g in gamma])
+    share = gamma / total[:, stratum] * size[stratum]
+    return share if cells.psu is None else share[:, group] * cells.count * weight
+
+
+def quantiles(replicates: Floats, level: float) -> tuple[Floats, Floats]:
+    """Lower and upper quantile over the first axis, ignoring replicates that are not estimable."""
+    tail = (1 - level) / 2
+    known = np.isfinite(replicates).any(axis=0)
+    lower, upper = np.nanquantile(np.where(known, replicates, 0.0), [tail, 1 - tail], axis=0)
+    return np.where(known, lower, np.nan), np.where(known, upper, np.nan)

@@ -1,0 +1,1 @@
+"""Estimates from a sample, and the rows that report them."""
