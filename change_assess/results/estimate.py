@@ -6,7 +6,7 @@ import json
 import platform
 import re
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from functools import cached_property
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -22,7 +22,7 @@ from change_assess.engine.linearise import Linearised, Part, Survey
 from change_assess.errors import DesignError, InputError, nearest
 from change_assess.legend import CHANGE, NO_CHANGE, ChangeClass, ChangeClasses, Legend, pair_name
 from change_assess.measures import BY_CLASS, ON_REQUEST, OVERALL, Contrast, Measure, Totals, joint_share, linearise
-from change_assess.results.population import Population, labelled_units, population_of, survey_of
+from change_assess.results.population import EXCLUDE, Population, labelled_units, population_of, survey_of
 from change_assess.results.rows import ContrastRows, IntervalChoice, worst_case
 from change_assess.tables import (
     ESTIMATE_COLUMNS,
@@ -141,8 +141,8 @@ def estimate(
     choice = IntervalChoice(level, interval, seed)
     build = _Builder(data, labels, recipes, population, choice, expansion=estimator == "expansion", kappa=kappa)
     build.run(survey)
-    if not use.all():
-        build.worst_cases(survey_of(data, population, labels.all_codes, population.kept[data.stratum]))
+    if not use.all() or population.unsampled_ha:
+        build.worst_cases(*_all_selected(data, labels, use, fpc))
     resolved = {
         "map": {name: list(cols) for name, cols in labels.maps.items()},
         "reference": list(labels.references),
@@ -160,6 +160,12 @@ def estimate(
         "seed": seed,
     }
     return build.result(survey, resolved)
+
+
+def _all_selected(sample: Sample, labels: _Labels, use: NDArray[np.bool_], fpc: bool) -> tuple[Survey, Population]:
+    """Survey of all selected units, labelled or not, of the strata that have any labelled one."""
+    sampled = population_of(sample, use, fpc=fpc, unsampled=EXCLUDE)
+    return survey_of(sample, sampled, labels.all_codes, sampled.kept[sample.stratum]), sampled
 
 
 # -- labels -----------------------------------------------------------------------------------------------
@@ -312,15 +318,14 @@ class _Builder:
                 near_kink += rows.near_kink
         self._notices(survey, near_kink)
 
-    def worst_cases(self, survey: Survey) -> None:
+    def worst_cases(self, survey: Survey, sampled: Population) -> None:
         """Add the rows that say what the unlabelled units and the unsampled strata could hide."""
-        name = next(iter(self.labels.maps), "")
         for level in self.levels:
-            contrast = self._contrast(survey, name, level)
+            contrast = replace(self._contrast(survey, "", level), known_area_ha=sampled.area_ha)
             lower, upper = worst_case(contrast, self.choice.level)
             domains = {"sampled strata": upper}
-            if self.population.unsampled_ha:
-                domains["all strata"] = upper + self._outside_ha()
+            if sampled.unsampled_ha:
+                domains["all strata"] = upper + sampled.unsampled_ha
             for domain, most in domains.items():
                 frame = pd.DataFrame(
                     {
@@ -340,11 +345,30 @@ class _Builder:
                 )
                 self.frames.append(_named(frame, Key("", level.reference, level.depth, level.period)))
 
-    def _outside_ha(self) -> float:
-        account = self.population.account
-        return float(account.loc[account["role"] == "excluded", "area_ha"].sum())
+    def _unsampled(self) -> pd.DataFrame:
+        """The lines that say how much area is excluded or assumed: part of no estimate, or of one by assumption only."""
+        area = self.population.account.groupby("role")["area_ha"].sum()
+        found = [role for role in ("excluded", "assumed") if role in area]
+        frame = pd.DataFrame(
+            {
+                "measure": "unsampled_area_ha",
+                "class": "",
+                "against": "",
+                "estimate": [area[r] for r in found],
+                "se": np.nan,
+                "df": np.nan,
+                "lower": np.nan,
+                "upper": np.nan,
+                "level": self.choice.level,
+                "interval": "",
+                "n": 0,
+                "domain": [f"{r}, not sampled" for r in found],
+            }
+        )
+        return _named(frame, Key("", ",".join(self.labels.references), "", ""))
 
     def result(self, survey: Survey, options: dict[str, Any]) -> Result:
+        self.frames.append(self._unsampled())
         table = pd.concat(self.frames, ignore_index=True)
         return Result(
             table=table[ESTIMATE_COLUMNS],

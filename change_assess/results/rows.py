@@ -27,6 +27,9 @@ from change_assess.measures import (
 ALL_PAIRS_UP_TO = 50
 """With more classes, joint shares are listed for the pairs that occur."""
 
+ROUNDING = 1e-15
+"""Shares smaller than this are differences of equal numbers."""
+
 SIMULATED_NUMBERS = 4_000_000
 """Random numbers that one simulation may draw; the number of simulated samples follows, at least 400."""
 
@@ -150,6 +153,7 @@ class ContrastRows:
     def _column(self, name: str, measure: Measure, n: NDArray[np.float64]) -> Column:
         x = linearise(measure, self.contrast)
         value, se = np.atleast_1d(x.value), np.atleast_1d(x.se)
+        value, se = (_without_rounding(x) if name not in IN_HECTARES else x for x in (value, se))
         value = np.where(np.isfinite(value), value, np.nan)
         method = "normal" if self.choice.method == "default" else self.choice.method
         lower, upper = intervals.METHODS[method](value, se, np.asarray(self.df), self.choice.level)
@@ -166,7 +170,7 @@ class ContrastRows:
         near = np.atleast_1d(x.kink)
         with np.errstate(divide="ignore", invalid="ignore"):
             replicates = np.asarray(measure(self._replicates()))
-        lower, upper = intervals.quantiles(replicates, self.choice.level)
+        lower, upper = (_without_rounding(x) for x in intervals.quantiles(replicates, self.choice.level))
         return Column(
             column.value,
             column.se,
@@ -287,6 +291,11 @@ class ContrastRows:
 def _spread(values: NDArray[Any], at: NDArray[np.intp], onto: NDArray[Any]) -> NDArray[Any]:
     onto[at] = values
     return onto
+
+
+def _without_rounding(share: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Set to zero what is only the rounding of a difference of equal shares."""
+    return np.where(np.abs(share) < ROUNDING, 0.0, share)
 
 
 def _class_counts(classes: NDArray[np.intp], count: NDArray[np.float64], k: int) -> NDArray[np.float64]:

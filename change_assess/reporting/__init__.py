@@ -1,0 +1,1 @@
+"""What people read: figures, tables, reports and the words in them."""
