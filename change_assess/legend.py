@@ -174,6 +174,13 @@ class ChangeClasses:
 
     recipes: tuple[ChangeClass, ...] = field(default=())
 
+    @classmethod
+    def of(cls, recipes: ChangeClasses | Iterable[str | ChangeClass]) -> ChangeClasses:
+        """Take recipes as they are or as texts such as ``"forest loss=forest>*"``."""
+        if isinstance(recipes, ChangeClasses):
+            return recipes
+        return cls(tuple(r if isinstance(r, ChangeClass) else ChangeClass.parse(r) for r in recipes))
+
     def table(self, legend: Legend) -> tuple[list[str], NDArray[np.intp]]:
         """Resolve the recipes for one legend.
 

@@ -23,6 +23,7 @@ from change_assess.errors import DesignError, InputError, nearest
 from change_assess.legend import ARROW, Legend, LegendClass, check_class_name, whole_number
 
 Table = str | Path | pd.DataFrame
+LegendSource = Table | Legend | Sequence[str]
 ESTIMATE_COLUMNS = [
     "measure",
     "depth",
@@ -286,7 +287,7 @@ def _check_fields(data: bytes, columns: int, file: str) -> None:
 # -- legend -----------------------------------------------------------------------------------------------
 
 
-def read_legend(source: Table | Legend | Sequence[str]) -> Legend:
+def read_legend(source: LegendSource) -> Legend:
     """Read a legend: a table `code, name[, colour][, group]`, a sequence of class names, or a Legend as it is.
 
     Raises

@@ -27,17 +27,24 @@ def taken(merged: Reconciled) -> dict[str, list[str]]:
 @pytest.fixture(scope="module")
 def flanders() -> Reconciled:
     return reconcile(
-        FLANDERS / "units.csv", [FLANDERS / "labels_long.csv"],
-        columns={"unit": "unit_id"}, changed=("changed", "Ja", "Nee"),
-    )  # fmt: skip
+        FLANDERS / "units.csv",
+        [FLANDERS / "labels_long.csv"],
+        columns={"unit": "unit_id"},
+        changed=("changed", "Ja", "Nee"),
+    )
 
 
 def test_real_labels_of_flanders_are_counted(flanders: Reconciled) -> None:
     """Of 3,815 units 3,802 are labelled at both dates; of 303 repeated units 230 have one class at each date."""
     assert flanders.counts == {
-        "units": 3815, "labelled": 3802, "partly": 1, "unlabelled": 12,
-        "with_repeats": 303, "agreeing": 230, "disagreeing": 73,
-    }  # fmt: skip
+        "units": 3815,
+        "labelled": 3802,
+        "partly": 1,
+        "unlabelled": 12,
+        "with_repeats": 303,
+        "agreeing": 230,
+        "disagreeing": 73,
+    }
     assert round(100 * flanders.counts["agreeing"] / flanders.counts["with_repeats"], 1) == 75.9
     assert flanders.disagreements["unit"].nunique() == 73
 
@@ -52,9 +59,9 @@ def test_labelled_units_of_flanders_fit_the_strata_table(flanders: Reconciled) -
 
 def test_ticks_that_contradict_labels_are_reported(flanders: Reconciled) -> None:
     """The tick "changed" contradicts the labels in 19 + 15 rows of the Flemish data."""
-    facts = dict(flanders.warnings)["changed-tick-contradicts-labels"]
+    facts = {w.code: w.facts for w in flanders.warnings}["changed-tick-contradicts-labels"]
     assert (facts["ticked_but_same"], facts["not_ticked_but_different"]) == (19, 15)
-    assert dict(flanders.warnings)["units-without-labels"] == {"none": 12, "some_dates": 1}
+    assert {w.code: w.facts for w in flanders.warnings}["units-without-labels"] == {"none": 12, "some_dates": 1}
 
 
 def test_sample_keeps_its_rows_columns_and_types() -> None:
@@ -89,7 +96,7 @@ def test_majority_takes_the_most_frequent_series_and_lists_ties() -> None:
     merged = reconcile(SAMPLE, labels(*rows), rule="majority")
     assert taken(merged)["a"] == ["forest", "forest"]
     assert taken(merged)["b"] == ["crop", "crop"]
-    assert dict(merged.warnings)["labels-tied"] == {"units": 1, "examples": ["b"]}
+    assert {w.code: w.facts for w in merged.warnings}["labels-tied"] == {"units": 1, "examples": ["b"]}
     assert merged.disagreements["taken"].tolist() == [False, True, True, True, False]
     assert merged.disagreements["tied"].tolist() == [False, False, False, True, True]
 
@@ -121,7 +128,7 @@ def test_repeated_rows_are_merged_and_reported() -> None:
     rows = ("a I1 forest crop", "a I1 forest crop", "b I1 forest -", "b I1 forest crop")
     merged = reconcile(SAMPLE, labels(*rows))
     assert taken(merged)["b"] == ["forest", "crop"]
-    assert dict(merged.warnings)["label-rows-repeated"] == {"rows": 2}
+    assert {w.code: w.facts for w in merged.warnings}["label-rows-repeated"] == {"rows": 2}
     assert merged.counts["with_repeats"] == 0
 
 

@@ -17,7 +17,7 @@ from collections.abc import Callable
 from typing import Any, NamedTuple
 
 import numpy as np
-from scipy import special, stats
+from scipy import special
 
 from change_assess.engine.cells import Cells, Floats
 from change_assess.engine.design import Design
@@ -47,14 +47,14 @@ def check_level(level: float) -> float:
 
 def normal(value: Floats, se: Floats, df: Floats, level: float) -> tuple[Floats, Floats]:
     """Normal limits; not clipped to the range of the measure."""
-    half = stats.norm.ppf(0.5 + level / 2) * se
+    half = special.ndtri(0.5 + level / 2) * se
     return value - half, value + half
 
 
 def student_t(value: Floats, se: Floats, df: Floats, level: float) -> tuple[Floats, Floats]:
     """Limits by Student's t; without any degree of freedom there are none."""
     known = np.asarray(df, float) > 0
-    half = np.where(known, stats.t.ppf(0.5 + level / 2, np.where(known, df, 1.0)), np.nan) * se
+    half = np.where(known, special.stdtrit(np.where(known, df, 1.0), 0.5 + level / 2), np.nan) * se
     return value - half, value + half
 
 
@@ -86,6 +86,8 @@ def exact(x: Floats, n: Floats, population: Floats | None, level: float) -> tupl
             lower = np.where(x > 0, special.betaincinv(np.maximum(x, 1), n - x + 1, tail), 0.0)
             upper = np.where(x < n, special.betaincinv(x + 1, np.maximum(n - x, 1), 1 - tail), 1.0)
         return lower, upper
+    from scipy import stats  # half a second to import, needed here only
+
     size = np.broadcast_to(np.asarray(population, float), x.shape)
     lower = _first(lambda m: stats.hypergeom.sf(x - 1, size, m, n) > tail, x, size - (n - x))
     upper = size - _first(lambda m: stats.hypergeom.sf(n - x - 1, size, m, n) > tail, n - x, size - x)

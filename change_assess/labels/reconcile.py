@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 from collections import Counter
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Literal
 
@@ -17,7 +17,7 @@ import numpy as np
 import pandas as pd
 
 from change_assess.errors import InputError, nearest
-from change_assess.tables import Table, TextTable, read_table
+from change_assess.tables import Notice, Table, TextTable, read_table
 
 Rule = Literal["first", "majority"]
 
@@ -41,14 +41,14 @@ class Reconciled:
     counts : dict of str to int
         Numbers of ``units, labelled, partly, unlabelled``, and among units that two or more interpreters labelled
         completely (``with_repeats``) those ``agreeing`` at every date and ``disagreeing``.
-    warnings : list of (str, dict)
+    warnings : tuple of Notice
         Stable codes with their numbers.
     """
 
     sample: pd.DataFrame
     disagreements: pd.DataFrame
     counts: dict[str, int]
-    warnings: list[tuple[str, dict[str, object]]] = field(default_factory=list)
+    warnings: tuple[Notice, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -126,7 +126,7 @@ def reconcile(
     merged = _fill(frame, units, choices, dates, sample_name)
     disagreements, counts = _compare(given, choices, dates, units)
     counts = _status_counts(merged) | counts
-    return Reconciled(merged, disagreements, counts, _warnings(given, choices, dates, changed, counts, repeated))
+    return Reconciled(merged, disagreements, counts, tuple(_warnings(given, choices, dates, changed, counts, repeated)))
 
 
 # --- reading ---------------------------------------------------------------------------------------------------------
@@ -169,8 +169,12 @@ def _read_units(sample: Table, columns: Mapping[str, str] | None) -> tuple[list[
         if unit in seen:
             raise InputError(
                 f"unit '{unit}' stands twice in the sample (first in row {seen[unit]})",
-                file=table.file, row=table.row(position), column="unit", value=unit, mend="Keep one row a unit.",
-            )  # fmt: skip
+                file=table.file,
+                row=table.row(position),
+                column="unit",
+                value=unit,
+                mend="Keep one row a unit.",
+            )
         seen[unit] = table.row(position)
     return units, table.file
 
@@ -210,8 +214,10 @@ def _same_columns(pieces: Sequence[_Labels]) -> list[str]:
             odd = sorted(set(piece.dates) ^ set(first.dates))[0]
             raise InputError(
                 f"its label columns are {', '.join(piece.dates)}, those of {first.file} are {', '.join(first.dates)}",
-                file=piece.file, column=odd, mend="Give every label table the same label columns.",
-            )  # fmt: skip
+                file=piece.file,
+                column=odd,
+                mend="Give every label table the same label columns.",
+            )
     return first.dates
 
 
@@ -222,9 +228,12 @@ def _check_units(given: pd.DataFrame, units: Sequence[str], sample_name: str) ->
         more = f" ({unknown.size} rows name unknown units)" if unknown.size > 1 else ""
         raise InputError(
             f"unit '{row['unit']}' is not in the {sample_name}{more}",
-            file=str(row[" file"]), row=int(row[" row"]), column="unit", value=row["unit"],
+            file=str(row[" file"]),
+            row=int(row[" row"]),
+            column="unit",
+            value=row["unit"],
             mend=f"Correct the unit, or give the sample these labels belong to.{nearest(row['unit'], units)}",
-        )  # fmt: skip
+        )
 
 
 def _without_repeats(given: pd.DataFrame, dates: Sequence[str]) -> tuple[pd.DataFrame, int]:
@@ -246,9 +255,12 @@ def _two_labels(first: pd.Series, second: pd.Series, column: str) -> InputError:
     return InputError(
         f"interpreter {second['interpreter']} labelled unit '{second['unit']}' twice: '{second[column]}' here, "
         f"'{first[column]}' in {first[' file']}, row {first[' row']}",
-        file=str(second[" file"]), row=int(second[" row"]), column=column, value=second[column],
+        file=str(second[" file"]),
+        row=int(second[" row"]),
+        column=column,
+        value=second[column],
         mend="Keep the row that holds.",
-    )  # fmt: skip
+    )
 
 
 # --- choosing --------------------------------------------------------------------------------------------------------
@@ -293,9 +305,11 @@ def _fill(
     for column in dates:
         if column in frame.columns and any(_stripped(frame[column].fillna(""))):
             raise InputError(
-                "the sample already holds labels", file=sample_name, column=column,
+                "the sample already holds labels",
+                file=sample_name,
+                column=column,
                 mend="Give the sample as it was drawn, or remove this column.",
-            )  # fmt: skip
+            )
     merged = frame.drop(columns=[*(c for c in dates if c in frame.columns)])
     merged = merged.drop(columns="label_status", errors="ignore")
     empty = _Choice(("",) * len(dates), "")
@@ -347,25 +361,23 @@ def _warnings(
     changed: tuple[str, str, str] | None,
     counts: Mapping[str, int],
     repeated: int,
-) -> list[tuple[str, dict[str, object]]]:
-    found: list[tuple[str, dict[str, object]]] = []
+) -> list[Notice]:
+    found: list[Notice] = []
     if counts["unlabelled"] or counts["partly"]:
-        found.append(("units-without-labels", {"none": counts["unlabelled"], "some_dates": counts["partly"]}))
+        found.append(Notice("units-without-labels", {"none": counts["unlabelled"], "some_dates": counts["partly"]}))
     if counts["disagreeing"]:
-        found.append(("interpreters-differ", {"units": counts["disagreeing"], "of": counts["with_repeats"]}))
+        found.append(Notice("interpreters-differ", {"units": counts["disagreeing"], "of": counts["with_repeats"]}))
     tied = [unit for unit, choice in choices.items() if choice.tied]
     if tied:
-        found.append(("labels-tied", {"units": len(tied), "examples": tied[:5]}))
+        found.append(Notice("labels-tied", {"units": len(tied), "examples": tied[:5]}))
     if repeated:
-        found.append(("label-rows-repeated", {"rows": repeated}))
+        found.append(Notice("label-rows-repeated", {"rows": repeated}))
     if changed:
         found += _contradictions(given, dates, changed)
     return found
 
 
-def _contradictions(
-    given: pd.DataFrame, dates: Sequence[str], changed: tuple[str, str, str]
-) -> list[tuple[str, dict[str, object]]]:
+def _contradictions(given: pd.DataFrame, dates: Sequence[str], changed: tuple[str, str, str]) -> list[Notice]:
     """Rows whose tick for "changed" does not fit their own labels."""
     column, yes, no = changed
     complete = given[(given[list(dates)] != "").all(axis=1)]
@@ -379,4 +391,4 @@ def _contradictions(
         "not_ticked_but_different": int(((ticked == no) & differs).sum()),
         "units": complete.loc[wrong, "unit"].tolist(),
     }
-    return [("changed-tick-contradicts-labels", details)]
+    return [Notice("changed-tick-contradicts-labels", details)]

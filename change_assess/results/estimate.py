@@ -26,6 +26,7 @@ from change_assess.results.population import EXCLUDE, Population, labelled_units
 from change_assess.results.rows import ContrastRows, IntervalChoice, worst_case
 from change_assess.tables import (
     ESTIMATE_COLUMNS,
+    LegendSource,
     Notice,
     Sample,
     Table,
@@ -58,8 +59,8 @@ def estimate(
     reference: Columns,
     strata: Table | None = None,
     dates: Sequence[str | int] | None = None,
-    legend: Table | Legend | Sequence[str] | None = None,
-    change_classes: Iterable[str | ChangeClass] = (),
+    legend: LegendSource | None = None,
+    change_classes: ChangeClasses | Iterable[str | ChangeClass] = (),
     fpc: bool = True,
     level: float = 0.95,
     interval: str = "default",
@@ -123,7 +124,7 @@ def estimate(
     labels = _Labels.read(data, _map_columns(map), _columns(reference), dates, legend)
     if data.rows == "post-strata" and post_stratify is None:
         post_stratify = "cells"
-    recipes = ChangeClasses(tuple(r if isinstance(r, ChangeClass) else ChangeClass.parse(r) for r in change_classes))
+    recipes = ChangeClasses.of(change_classes)
     use = labelled_units(data, labels.reference)
     population = population_of(data, use, fpc=fpc, unsampled=unsampled)
     post = labels.post_columns(data) if post_stratify else None
@@ -203,7 +204,7 @@ class _Labels:
         maps: dict[str, tuple[str, ...]],
         references: tuple[str, ...],
         dates: Sequence[str | int] | None,
-        legend: Table | Legend | Sequence[str] | None,
+        legend: LegendSource | None,
     ) -> _Labels:
         if not references:
             raise InputError("no reference column was named", mend="Name it with --reference COLUMN.")

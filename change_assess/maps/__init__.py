@@ -1,0 +1,1 @@
+"""Everything that touches pixels: opening rasters, pixel areas, tallies, strata."""

@@ -1,0 +1,1 @@
+"""Planning, drawing and topping up a probability sample."""
