@@ -6,6 +6,7 @@ A change class is a recipe over such pairs, and of several recipes the first tha
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from functools import cached_property
@@ -107,17 +108,12 @@ class Legend:
         return {c.code: i for i, c in enumerate(self.classes)}
 
 
+_WHOLE = re.compile(r"[+-]?[0-9]+(\.0*)?")
+
+
 def whole_number(text: str) -> int | None:
     """Read ``"3"`` or ``"3.0"`` as 3; anything else, 2.5 included, is None."""
-    try:
-        return int(text)
-    except ValueError:
-        pass
-    try:
-        number = float(text)
-    except ValueError:
-        return None
-    return int(number) if np.isfinite(number) and number == int(number) else None
+    return int(text.partition(".")[0]) if _WHOLE.fullmatch(text) else None
 
 
 def check_class_name(name: str, *, file: str | None = None, row: int | None = None, column: str | None = None) -> None:

@@ -175,7 +175,8 @@ def shift_by_class(t: Totals) -> Values:
 
 def quantity_disagreement(t: Totals) -> Values:
     """Disagreement due to different amounts of the classes (Pontius & Millones 2011, eq. 3); shape (...)."""
-    return quantity_by_class(t).sum(axis=-1) / 2
+    unmapped = 1 - t.mapped.sum(axis=-1) / t.everything  # what the map leaves empty is one more class, nowhere right
+    return (quantity_by_class(t).sum(axis=-1) + unmapped) / 2
 
 
 def allocation_disagreement(t: Totals) -> Values:

@@ -9,7 +9,8 @@ from __future__ import annotations
 import csv
 import hashlib
 import io
-from collections.abc import Mapping, Sequence
+import re
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -152,11 +153,11 @@ def read_table(
         For a missing or unreadable file.
     """
     if isinstance(source, pd.DataFrame):
-        table = TextTable(_as_text(source), what)
+        table = TextTable(_as_text(source, what), what)
     elif Path(source).suffix.lower() in (".gpkg", ".parquet", ".geoparquet"):
         from change_assess import vectors
 
-        table = TextTable(_as_text(vectors.read_attributes(source)), Path(source).name)
+        table = TextTable(_as_text(vectors.read_attributes(source), what), Path(source).name)
     else:
         table = _read_csv(Path(source))
     if columns:
@@ -180,8 +181,10 @@ def _rename(table: TextTable, columns: Mapping[str, str]) -> pd.DataFrame:
     return table.frame.rename(columns=theirs)
 
 
-def _as_text(frame: pd.DataFrame) -> pd.DataFrame:
+def _as_text(frame: pd.DataFrame, what: str) -> pd.DataFrame:
     text = {}
+    for name in frame.columns[frame.columns.duplicated()][:1]:
+        raise InputError(f"two columns are called '{name}'", file=what, column=str(name), mend="Rename one.")
     for name in frame.columns:
         column = frame[name]
         if pd.api.types.is_string_dtype(column) and not column.isna().any():
@@ -192,11 +195,13 @@ def _as_text(frame: pd.DataFrame) -> pd.DataFrame:
 
 
 def _cell_text(value: Any) -> str:
+    if isinstance(value, np.generic):
+        value = value.item()
     if value is None or value is pd.NA or value is pd.NaT or (isinstance(value, float) and np.isnan(value)):
         return ""
-    if isinstance(value, float) and value == int(value) and abs(value) < 1e15:
-        return str(int(value))
-    return repr(value) if isinstance(value, float) else str(value)
+    if isinstance(value, float):
+        return str(int(value)) if value.is_integer() and abs(value) < 1e15 else repr(value)
+    return str(value)
 
 
 def _read_csv(path: Path) -> TextTable:
@@ -212,6 +217,7 @@ def _read_csv(path: Path) -> TextTable:
         names=header,
         index_col=False,
         skip_blank_lines=False,
+        skipinitialspace=b', "' in data,
     )
     end = len(frame)
     while end and not any(frame.iloc[end - 1]):  # blank lines at the end of the file
@@ -219,18 +225,30 @@ def _read_csv(path: Path) -> TextTable:
     return TextTable(frame.iloc[:end], path.name, notices)
 
 
+_BOM = b"\xef\xbb\xbf"
+
+
+def _from_utf16(data: bytes, file: str) -> bytes:
+    try:
+        return data.decode("utf-16").encode("utf-8")
+    except UnicodeDecodeError:
+        raise InputError(
+            "the text is said to be UTF-16 but is not, or is cut off", file=file, mend="Save it as CSV in UTF-8."
+        ) from None
+
+
 def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
     """Bytes of a text file as plain UTF-8 with newlines, and notices of what had to be read past."""
     data, notices = files.read_bytes(path), []
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
-        data = data.decode("utf-16", errors="replace").encode("utf-8")
+        data = _from_utf16(data, path.name)
         notices.append(Notice("byte-order-mark", {"file": path.name, "encoding": "UTF-16"}))
-    if data.startswith(b"\xef\xbb\xbf"):
-        data = data[3:]
+    if data.startswith(_BOM):
+        data = data[len(_BOM) :].removeprefix(_BOM)
         notices.append(Notice("byte-order-mark", {"file": path.name, "encoding": "UTF-8"}))
     if not data.strip():
         raise InputError("the file is empty", file=path.name, mend="Check that the right file was named.")
-    if b"\0" in data[:4096]:
+    if b"\0" in data:
         raise InputError("this is not a text table", file=path.name, mend="Save it as CSV in UTF-8.")
     try:
         data.decode("utf-8")
@@ -242,7 +260,8 @@ def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
             row=row,
             mend="Save the file as CSV in UTF-8.",
         ) from None
-    if b"\r" in data and b"\n" not in data:
+    data = data.replace(b"\r\n", b"\n")
+    if b"\r" in data:
         data = data.replace(b"\r", b"\n")
         notices.append(Notice("carriage-return-lines", {"file": path.name}))
     return data, tuple(notices)
@@ -250,7 +269,7 @@ def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
 
 def _header(data: bytes, file: str) -> list[str]:
     line = data.split(b"\n", 1)[0].decode("utf-8").rstrip("\r")
-    names = [n.strip() for n in next(csv.reader([line]), [])]
+    names = [n.strip() for n in next(csv.reader([line], skipinitialspace=True), [])]
     for delimiter, name in ((";", "semicolons"), ("\t", "tabs"), ("|", "bars")):
         if line.count(delimiter) > line.count(","):
             raise InputError(
@@ -273,7 +292,7 @@ def _check_fields(data: bytes, columns: int, file: str) -> None:
     lines = data.count(b"\n") + (not data.endswith(b"\n"))
     if b'"' not in data and data.count(b",") == (columns - 1) * lines:
         return
-    for row, fields in enumerate(csv.reader(io.StringIO(data.decode("utf-8"), newline="")), start=1):
+    for row, fields in _csv_rows(data, file):
         if len(fields) != columns and not (len(fields) == 0 or (columns > 1 and not any(fields))):
             comma = " A decimal comma makes two fields of one number: use points." if len(fields) > columns else ""
             raise InputError(
@@ -282,6 +301,21 @@ def _check_fields(data: bytes, columns: int, file: str) -> None:
                 row=row,
                 mend=f"Complete or quote the row.{comma}",
             )
+
+
+def _csv_rows(data: bytes, file: str) -> Iterator[tuple[int, list[str]]]:
+    reader = csv.reader(io.StringIO(data.decode("utf-8"), newline=""), skipinitialspace=True)
+    row = 0
+    try:
+        for row, fields in enumerate(reader, start=1):
+            yield row, fields
+    except csv.Error as error:
+        raise InputError(
+            f"the row cannot be read ({error})",
+            file=file,
+            row=row + 1,
+            mend="Look for a quotation mark that is not closed, or for mixed line ends.",
+        ) from None
 
 
 # -- legend -----------------------------------------------------------------------------------------------
@@ -348,11 +382,11 @@ def legend_of_labels(tables: Sequence[tuple[TextTable, Sequence[str]]]) -> Legen
     return Legend.of_names(sorted(found))
 
 
+_NUMBER = re.compile(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?|[+-]?inf")
+
+
 def _is_number(word: str) -> bool:
-    try:
-        return bool(np.isfinite(float(word)))
-    except ValueError:
-        return False
+    return _NUMBER.fullmatch(word) is not None
 
 
 def _refuse_label(table: TextTable, column: str, word: str, what: str, mend: str) -> None:
@@ -469,7 +503,7 @@ def read_sample(
         If the tables contradict the design.
     """
     units = read_table(sample, "sample", required=["unit"], columns=columns)
-    _refuse_repeats(units, "unit", "Every unit needs an id of its own.")
+    _check_unit_ids(units)
     cross = None if crossing is None else read_table(crossing, "crossing table", required=["area_ha"], columns=columns)
     if cross is not None:
         _check_crossing(cross)
@@ -484,9 +518,6 @@ def read_sample(
     cluster_frame, cluster = _read_clusters(clusters, units, frame, stratum, columns)
     kind = _design_kind(design, frame, cluster_frame, cluster)
     _check_population(frame, stratum, strata_file, cluster_frame)
-    digest = hashlib.sha256()
-    for part in (units.frame["unit"], pd.Series(stratum)):
-        digest.update(pd.util.hash_array(np.asarray(part)).tobytes())
     return Sample(
         units=units,
         strata=frame,
@@ -497,17 +528,37 @@ def read_sample(
         cluster=cluster,
         crossing=cross,
         design=kind,
-        sample_id=digest.hexdigest()[:16],
+        sample_id=_sample_id(units, frame),
         notices=(*units.notices, *notices, *(cross.notices if cross else ())),
     )
 
 
+PLACE_COLUMNS = ("unit", "stratum", "cluster", "area_ha", "x", "y", "longitude", "latitude")
+"""Columns that tell one sample from another; labels may be added to a sample without making it another one."""
+
+
+def _sample_id(units: TextTable, strata: pd.DataFrame) -> str:
+    digest = hashlib.sha256(strata.to_csv().encode())
+    for name in PLACE_COLUMNS:
+        if name in units.frame.columns:
+            digest.update(name.encode() + b"\0" + "\n".join(units.frame[name].tolist()).encode())
+    return digest.hexdigest()[:16]
+
+
+def _check_unit_ids(units: TextTable) -> None:
+    blank = np.asarray(units.frame["unit"].str.strip() == "")
+    for at in np.flatnonzero(blank)[:1]:
+        raise InputError("a unit has no id", file=units.file, row=units.row(at), column="unit", mend="Give it one.")
+    _refuse_repeats(units, "unit", "Every unit needs an id of its own.")
+
+
 def _refuse_repeats(table: TextTable, column: str, mend: str) -> None:
-    repeated = np.asarray(table.frame[column].duplicated())
+    texts = table.frame[column].str.strip()
+    repeated = np.asarray(texts.duplicated())
     if repeated.any():
         at = int(np.flatnonzero(repeated)[0])
-        value = table.frame[column].iloc[at]
-        first = int(np.flatnonzero(np.asarray(table.frame[column] == value))[0])
+        value = texts.iloc[at]
+        first = int(np.flatnonzero(np.asarray(texts == value))[0])
         raise InputError(
             f"'{value}' stands twice (first in row {table.row(first)})",
             file=table.file,
@@ -730,7 +781,8 @@ def read_matrix(matrix: Table, strata: Table, *, rows: str, columns: Mapping[str
         sample = read_sample(units, crossing=cross[[c for c in ("map", "units", "area_ha") if c in cross.columns]])
     from dataclasses import replace
 
-    return replace(sample, rows=rows)
+    counted = hashlib.sha256(counts.tobytes() + sample.sample_id.encode()).hexdigest()
+    return replace(sample, rows=rows, sample_id=counted[:16])
 
 
 # -- strata from exact areas ------------------------------------------------------------------------------

@@ -21,8 +21,8 @@ def read_attributes(path: str | Path) -> pd.DataFrame:
         If it cannot be read as what its suffix says.
     """
     path = Path(path)
-    if not path.exists():
-        raise FileError(f"{path} does not exist.")
+    if not path.is_file():
+        raise FileError(f"{path} {'is a folder, not a file' if path.exists() else 'does not exist'}.")
     try:
         if path.suffix.lower() == ".gpkg":
             import pyogrio
@@ -48,5 +48,5 @@ def write_points(path: str | Path, frame: pd.DataFrame, *, x: str, y: str, crs: 
     points = geopandas.GeoDataFrame(frame, geometry=geopandas.points_from_xy(frame[x], frame[y]), crs=crs)
     with replacing(path) as temporary:
         temporary.unlink()
-        points.to_file(temporary, driver="GPKG")
+        points.to_file(temporary, driver="GPKG", layer=Path(path).stem)
     return Path(path)

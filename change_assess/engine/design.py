@@ -83,9 +83,10 @@ class Design:
         Area of each stratum, in hectares.
     M : ndarray, shape (H,), optional
         Clusters in each stratum; given, the design is a cluster or two-stage design.
-    cluster_stratum, cluster_units : ndarray, shape (m,), optional
-        Of each selected cluster its stratum and its number of units. The cells refer to clusters by their position
-        here; a cluster with fewer labelled units than it has is a second stage of selection.
+    cluster_stratum, cluster_units, cluster_labelled : ndarray, shape (m,), optional
+        Of each selected cluster its stratum, its number of units and how many of them are labelled. The cells refer
+        to clusters by their position here; where not all units are labelled (the
+        default is that they are), there is a second stage of selection.
     fpc : bool
         Finite population correction; without it, weights are the same and the variance is that of sampling
         with replacement (in two-stage designs, of primary units only).
@@ -102,6 +103,7 @@ class Design:
     M: Floats | None = None
     cluster_stratum: Ints | None = None
     cluster_units: Floats | None = None
+    cluster_labelled: Floats | None = None
     fpc: bool = True
     divisor: Literal["n-1", "n"] = "n-1"
     adjust: Calibration | None = None
@@ -177,10 +179,18 @@ class Design:
         primary = self.primary_count(cells)
         return float(primary.sum() - len(np.unique(self._merged[primary > 0])))
 
-    def lonely(self, cells: Cells) -> Ints:
-        """Strata with one primary unit of several, for which no variance can be computed."""
-        stage = next(self._stages(cells))
-        return np.flatnonzero(np.isnan(stage.factor) & (stage.size > 0))
+    def lonely(self, cells: Cells) -> tuple[Ints, Ints]:
+        """Strata with one primary unit of several, and clusters with one labelled unit of several: no variance."""
+        first, *second = self._stages(cells)
+        clusters = np.flatnonzero(np.isnan(second[0].factor)) if second else np.zeros(0, np.intp)
+        return np.flatnonzero(np.isnan(first.factor) & (first.size > 0)), clusters
+
+    def same_sampling(self, other: Design) -> bool:
+        """Whether both state the same sampling; how weights are adjusted may differ."""
+        arrays = ("N", "A", "M", "cluster_stratum", "cluster_units", "cluster_labelled", "collapse")
+        pairs = [(getattr(self, name), getattr(other, name)) for name in arrays]
+        same = all(x is y or (x is not None and y is not None and np.array_equal(x, y)) for x, y in pairs)
+        return same and (self.fpc, self.divisor) == (other.fpc, other.divisor)
 
     def first_stage_factor(self, cells: Cells) -> Floats:
         """Factor (1 - f) n / (n - 1) of each stratum's centred sum of squares, shape (H,)."""
@@ -192,13 +202,14 @@ class Design:
     def _clusters(self) -> _Clusters:
         if self.cluster_stratum is None or self.cluster_units is None:
             raise ValueError("a cluster design needs the stratum and the number of units of each cluster")
-        return _Clusters(self.cluster_stratum, self.cluster_units)
+        labelled = self.cluster_units if self.cluster_labelled is None else self.cluster_labelled
+        return _Clusters(self.cluster_stratum, self.cluster_units, labelled)
 
     def _within_weight(self, cells: Cells) -> Floats:
-        """Units of its cluster that one labelled unit stands for, shape (..., c)."""
+        """Units of its cluster that one labelled unit stands for, shape (c,)."""
         assert cells.psu is not None, "cells of a cluster design carry their cluster"
-        labelled = _by_group(cells.count, cells.psu, len(self._clusters.units))
-        return np.asarray((self._clusters.units / labelled)[..., cells.psu])
+        clusters = self._clusters
+        return np.asarray((clusters.units / clusters.labelled)[cells.psu])
 
     def _without_constants(self, scores: sparse.csr_array, cells: Cells) -> sparse.csr_array:
         """Empty the rows that are constant within each stratum: centring would leave nothing of them."""
@@ -231,7 +242,7 @@ class Design:
         size = self.primary_count(cells)
         ones = np.ones(len(clusters.units))
         yield self._first_stage(lambda u: u @ to_cluster, ones, merged[clusters.stratum], size, self.M, merged)
-        labelled = _by_group(cells.count, cells.psu, len(clusters.units))
+        labelled = clusters.labelled
         if self.fpc and np.any(labelled < clusters.units):
             with np.errstate(divide="ignore", invalid="ignore"):
                 first = (size / self.M)[clusters.stratum]
@@ -263,6 +274,7 @@ Reduce = Callable[[sparse.csr_array], sparse.csr_array]
 class _Clusters:
     stratum: Ints
     units: Floats
+    labelled: Floats
 
 
 @dataclass(frozen=True, eq=False)

@@ -45,7 +45,8 @@ class Part:
     def counts_of(self, ancestor: Part, count: Floats) -> Floats:
         """Counts, shape (..., c), of this part added up to the cells of `ancestor`."""
         columns = self.column_of(ancestor)
-        return np.asarray(count @ indicator_of(columns, np.ones(len(columns)), len(ancestor.cells)))
+        adder = indicator_of(columns, np.ones(len(columns)), len(ancestor.cells))
+        return np.asarray(count.reshape(-1, len(columns)) @ adder).reshape(*count.shape[:-1], len(ancestor.cells))
 
 
 @dataclass(frozen=True, eq=False)
@@ -123,6 +124,11 @@ def _join(a: Part, b: Part) -> Part:
         raise DesignError(
             "Two estimates from one sample use different units, because labels are missing in one of them. "
             "Estimate both in one call, so that they share their units."
+        )
+    if not a.design.same_sampling(b.design):
+        raise DesignError(
+            "Two estimates from one sample state different designs (finite population correction, collapsed strata or "
+            "excluded strata), so their covariance is not defined. Estimate both in the same way."
         )
     use = left >= 0
     distinct, at = np.unique(left[use] * len(b.cells) + right[use], return_inverse=True)

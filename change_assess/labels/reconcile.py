@@ -17,6 +17,7 @@ import numpy as np
 import pandas as pd
 
 from change_assess.errors import InputError, nearest
+from change_assess.files import write_together
 from change_assess.tables import Notice, Table, TextTable, read_table
 
 Rule = Literal["first", "majority"]
@@ -49,6 +50,13 @@ class Reconciled:
     disagreements: pd.DataFrame
     counts: dict[str, int]
     warnings: tuple[Notice, ...] = ()
+
+    def save(self, folder: str | Path) -> list[Path]:
+        """Write `labelled_sample.csv` and `disagreements.csv`; both or neither."""
+        tables = {"labelled_sample.csv": self.sample, "disagreements.csv": self.disagreements}
+        texts = {Path(folder) / name: t.to_csv(index=False, lineterminator="\n") for name, t in tables.items()}
+        write_together(texts)
+        return list(texts)
 
 
 @dataclass(frozen=True)

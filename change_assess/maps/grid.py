@@ -67,6 +67,13 @@ class Grid:
     transform: Transform
     crs: str
 
+    @property
+    def extent(self) -> tuple[float, float, float, float]:
+        """Left, right, bottom and top, in units of the reference system."""
+        a, _, c, _, e, f = self.transform
+        x, y = sorted((c, c + a * self.width)), sorted((f, f + e * self.height))
+        return x[0], x[1], y[0], y[1]
+
     def centres(self, rows: NDArray[Any], columns: NDArray[Any]) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
         """Coordinates x and y of pixel centres, in units of the reference system."""
         a, _, c, _, e, f = self.transform
@@ -368,6 +375,12 @@ class Coder:
         table = np.zeros(int(values[-1]) - int(values[0]) + 1, dtype=np.uint8)
         table[values.astype(np.int64) - int(values[0])] = coded
         return table[block.astype(np.int64) - int(values[0])]
+
+
+def whole_map(stack: MapStack, index: int) -> NDArray[Any]:
+    """All codes of one map, shape (rows, columns): for maps that fit into memory."""
+    with Reader(stack) as reader:
+        return reader.read(index, Window(0, 0, stack.grid.width, stack.grid.height)).copy()
 
 
 class Reader:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
@@ -9,13 +10,16 @@ from concurrent.futures import Executor, Future, ThreadPoolExecutor
 from contextlib import contextmanager
 from dataclasses import dataclass
 from itertools import pairwise
+from pathlib import Path
 from typing import Any, TypeVar
 
 import numpy as np
 import pandas as pd
 from rasterio.windows import Window
 
+from change_assess import __version__
 from change_assess.errors import InputError
+from change_assess.files import write_together
 from change_assess.legend import Legend
 from change_assess.maps.area import NOTED_DISTORTION
 from change_assess.maps.count import CombinationCounts, whole_weights
@@ -71,6 +75,28 @@ class Tally:
     def crossing(self) -> pd.DataFrame:
         """Crossing table: one column a date, `units`, `area_ha`."""
         return self.trajectories.copy()
+
+    def to_json(self) -> str:
+        """Tables, dates, files and warnings as JSON."""
+        tables = {n: getattr(self, n).to_dict("records") for n in ("trajectories", "transitions", "unmapped")}
+        content = {
+            "format": 1,
+            "program": "change-assess",
+            "version": __version__,
+            "dates": list(self.dates),
+            "files": [{"file": Path(path).name, "band": band} for path, band in self.files],
+            "warnings": [{"code": w.code, **w.facts} for w in self.warnings],
+            **tables,
+        }
+        return json.dumps(content, indent=1, ensure_ascii=False, allow_nan=False) + "\n"
+
+    def save(self, folder: str | os.PathLike[str]) -> list[Path]:
+        """Write `trajectories.csv`, `transitions.csv`, `unmapped.csv` and `tally.json`; all or nothing."""
+        names = ("trajectories", "transitions", "unmapped")
+        texts = {Path(folder) / f"{n}.csv": getattr(self, n).to_csv(index=False, lineterminator="\n") for n in names}
+        texts[Path(folder) / "tally.json"] = self.to_json()
+        write_together(texts)
+        return list(texts)
 
 
 def tally(

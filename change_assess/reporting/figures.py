@@ -178,7 +178,8 @@ def map_panel(
     ]
     columns = min(len(names), max(2, len(covers)))
     with _style():
-        sheet, axes, side = _panel_sheet(len(names), columns, ground)
+        labels = [*legend.names, *change_names, *([] if points is None else points["stratum"].astype(str).unique())]
+        sheet, axes, side = _panel_sheet(len(names), columns, ground, max(map(len, labels)))
         for axis, name in zip(axes, names, strict=True):
             axis.set_title(name[0].upper() + name[1:])
         keys: list[_Entries] = [_draw_covers(axes, covers, legend, ground)]
@@ -196,14 +197,15 @@ def map_panel(
         return _save(sheet, path, _map_alt(covers, legend, changes, points))
 
 
-def _panel_sheet(count: int, columns: int, ground: _Ground) -> tuple[Sheet, list[Axes], Axes]:
-    """A sheet with `count` map axes in a grid and one empty axis at the right for the legends."""
+def _panel_sheet(count: int, columns: int, ground: _Ground, letters: int) -> tuple[Sheet, list[Axes], Axes]:
+    """A sheet with `count` map axes in a grid and one empty axis at the right for legends of so many `letters`."""
+    side_width = 0.072 * (letters + 9) + 0.45
     rows = ceil(count / columns)
     width = 3.3
     height = float(np.clip(width * ground.tallness, 1.6, 6.0)) + 0.55
-    sheet = Sheet(figsize=(columns * width + 2.5, max(rows * height + 0.35, 3.6)), layout=None)
+    sheet = Sheet(figsize=(columns * width + side_width + 0.2, max(rows * height + 0.35, 3.6)), layout=None)
     grid = sheet.add_gridspec(
-        rows, columns + 1, width_ratios=[*([1.0] * columns), 2.3 / width],
+        rows, columns + 1, width_ratios=[*([1.0] * columns), side_width / width],
         left=0.012, right=0.99, top=1 - 0.36 / sheet.get_figheight(), bottom=0.55 / sheet.get_figheight(),
         wspace=0.06, hspace=0.28,
     )  # fmt: skip

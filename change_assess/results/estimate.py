@@ -258,7 +258,9 @@ def _date_names(dates: Sequence[str | int] | None, references: tuple[str, ...]) 
         names = tuple(str(d).strip() for d in dates)
         if len(names) != len(references):
             raise InputError(
-                f"{len(names)} dates were given for {len(references)} reference columns", value=list(names)
+                f"{len(names)} dates were given for {len(references)} reference columns",
+                value=list(names),
+                mend="Give one date for each column of --reference.",
             )
         if len(set(names)) < len(names):
             raise InputError("a date is given twice", value=list(names), mend="Name each date once.")
@@ -347,7 +349,7 @@ class _Builder:
                 self.frames.append(_named(frame, Key("", level.reference, level.depth, level.period)))
 
     def _unsampled(self) -> pd.DataFrame:
-        """The lines that say how much area is excluded or assumed: part of no estimate, or of one by assumption only."""
+        """The lines that say how much area is excluded, or in the estimates by assumption only."""
         area = self.population.account.groupby("role")["area_ha"].sum()
         found = [role for role in ("excluded", "assumed") if role in area]
         frame = pd.DataFrame(
@@ -462,9 +464,12 @@ class _Builder:
     def _notices(self, survey: Survey, near_kink: list[str]) -> None:
         part = survey.only
         names = self.sample.strata["stratum"]
-        lonely = part.design.lonely(part.cells)
-        if len(lonely):
-            self.notices.append(Notice("single-unit-strata", {"names": names.iloc[lonely].tolist()}))
+        strata, clusters = part.design.lonely(part.cells)
+        if len(strata):
+            self.notices.append(Notice("single-unit-strata", {"names": names.iloc[strata].tolist()}))
+        if len(clusters) and self.sample.clusters is not None:
+            ids = self.sample.clusters["cluster"].iloc[clusters].tolist()
+            self.notices.append(Notice("single-unit-clusters", {"names": ids}))
         if near_kink:
             self.notices.append(Notice("near-kink", {"measures": sorted(set(near_kink))}))
         for name, codes in self.labels.map.items():
@@ -477,6 +482,10 @@ class _Builder:
         missing = [c for c in self.labels.legend.names if c.casefold() in _missing_words()]
         if missing:
             self.notices.append(Notice("label-looks-missing", {"labels": missing}))
+        folded = pd.Series(self.labels.legend.names)
+        same = folded[folded.str.casefold().duplicated(keep=False)].tolist()
+        if same:
+            self.notices.append(Notice("labels-differ-by-case", {"labels": same}))
         if self.kappa:
             self.notices.append(Notice("kappa"))
         self._area_notice()

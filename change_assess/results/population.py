@@ -252,6 +252,7 @@ def survey_of(
         M=population.M,
         cluster_stratum=None if clusters is None else clusters["stratum"].to_numpy(np.intp),
         cluster_units=None if clusters is None else clusters["units"].to_numpy(float),
+        cluster_labelled=None if clusters is None else _labelled_by_cluster(sample, use),
         fpc=population.fpc,
         collapse=_collapse(sample, collapse),
     )
@@ -270,6 +271,12 @@ def survey_of(
     elif estimator == "separate":
         design = replace(design, adjust=_separate(population, cells))
     return Survey.of(design, cells)
+
+
+def _labelled_by_cluster(sample: Sample, use: NDArray[np.bool_]) -> NDArray[np.float64]:
+    assert sample.clusters is not None
+    assert sample.cluster is not None
+    return np.bincount(sample.cluster[use], minlength=len(sample.clusters)).astype(float)
 
 
 def _with_empty_clusters(cells: Cells, clusters: pd.DataFrame) -> Cells:
@@ -303,7 +310,8 @@ def _collapse(sample: Sample, rules: Sequence[str]) -> NDArray[np.intp] | None:
                     value=rule,
                     mend=f"Write --collapse STRATUM=INTO with names of the strata table.{nearest(name, names)}",
                 )
-        target[names.index(source)] = target[names.index(into)]
+        left, right = target[names.index(source)], target[names.index(into)]
+        target[target == left] = right
     return target
 
 

@@ -196,7 +196,7 @@ class ContrastRows:
         if k > ALL_PAIRS_UP_TO:
             return self._block("joint_share", column, names[row], names[col])
         at = row * k + col
-        lonely = len(self.part.design.lonely(self.part.cells)) > 0
+        lonely = any(len(found) for found in self.part.design.lonely(self.part.cells))
         fill = {"value": 0.0, "se": np.nan if lonely else 0.0, "lower": np.nan, "upper": np.nan}
         numbers = {f: _spread(getattr(column, f), at, np.full(k * k, x)) for f, x in fill.items()}
         used = _spread(column.interval, at, np.full(k * k, "", dtype=object))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import os
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
@@ -14,13 +15,14 @@ import pyproj
 from numpy.typing import NDArray
 
 from change_assess.errors import DesignError, InputError, nearest
-from change_assess.files import sha256
+from change_assess.files import sha256, write_text
 from change_assess.legend import Legend, whole_number
 from change_assess.maps.area import parsed
 from change_assess.maps.cells import CELL, cell_counts, codes_at, pixels_of_ranks
 from change_assess.maps.grid import MapSource, MapStack, check_same_grid, open_maps
 from change_assess.maps.tally import Progress
 from change_assess.tables import LegendSource, Table, read_legend, read_table
+from change_assess.vectors import write_points
 
 UNEQUAL_AREAS = 0.001
 """Pixel areas that differ by more than this share within a stratum are written for every unit."""
@@ -44,6 +46,14 @@ class DrawnSample:
 
     sample: pd.DataFrame
     record: dict[str, Any]
+
+    def save(self, folder: str | os.PathLike[str]) -> list[Path]:
+        """Write `design_record.json` first, then `sample.csv` and `sample.gpkg` (points); return the paths."""
+        paths = [Path(folder) / name for name in ("design_record.json", "sample.csv", "sample.gpkg")]
+        write_text(paths[0], json.dumps(self.record, indent=1, ensure_ascii=False) + "\n")
+        write_text(paths[1], self.sample.to_csv(index=False, lineterminator="\n"))
+        write_points(paths[2], self.sample, x="x", y="y", crs=self.record["crs"])
+        return paths
 
 
 def draw(
@@ -332,6 +342,7 @@ def _record(frame: pd.DataFrame, stack: MapStack, maps: MapStack | None, seed: i
         "stratum_raster": {"file": Path(band.path).name, "sha256": sha256(band.path)},
         "rows": stack.grid.height,
         "columns": stack.grid.width,
+        "crs": stack.grid.crs,
         "cell_pixels": CELL,
         "strata": [
             {"stratum": name, "code": code, "N_h": units, "n_h": size}

@@ -1,0 +1,229 @@
+"""Results on a terminal: rich tables, rounded to the precision of the standard error."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from typing import TYPE_CHECKING, Any
+
+import pandas as pd
+from rich.console import Console
+from rich.table import Table
+from rich.text import Text
+
+from change_assess.reporting import texts
+from change_assess.results.estimate import Key, Result, View
+from change_assess.tables import Notice
+
+if TYPE_CHECKING:
+    from change_assess.maps.tally import Tally
+
+MOST_CLASSES = 12
+"""Tables of more classes are left to the files."""
+
+MOST_MATRIX_CLASSES = 8
+MARKS = {"exact": "ᵉ", "simulated": "ˢ", "zero-count": "ᶻ", "t": "ᵗ"}
+
+
+def show_result(console: Console, result: Result) -> None:
+    """Print what was found: the sample, areas and accuracies at each depth, matrices, what must be known."""
+    _show_sample(console, result)
+    marks: set[str] = set()
+    left_out = []
+    for key, contrast in result.contrasts.items():
+        if len(contrast.classes) > MOST_CLASSES:
+            left_out.append(_title(key))
+            continue
+        rows = _rows_of(result.table, key)
+        console.print(_area_table(rows, key, result.level))
+        if key.map:
+            console.print(_accuracy_table(rows, key, result.level))
+            if len(contrast.classes) <= MOST_MATRIX_CLASSES:
+                for table in _matrices(View(contrast, result.level), key):
+                    console.print(table)
+        marks |= set(rows["interval"]) & set(MARKS)
+    _show_worst_case(console, result)
+    if marks:
+        console.print(*(f"{MARKS[m]} {texts.INTERVALS[m]}." for m in sorted(marks)), sep="\n", style="dim")
+    if left_out:
+        console.print(f"More than {MOST_CLASSES} classes, in the files only: {'; '.join(left_out)}.", style="dim")
+    show_notices(console, result.warnings)
+    console.print(*texts.CAUTIONS, sep="\n", style="dim")
+
+
+def show_notices(console: Console, notices: Iterable[Notice]) -> None:
+    """Print each notice as a sentence."""
+    for notice in notices:
+        console.print(Text.assemble(("! ", "bold yellow"), texts.notice_text(notice)))
+
+
+def _show_sample(console: Console, result: Result) -> None:
+    part = result.survey.only
+    labelled = int(part.cells.count.sum())
+    strata = int((result.account["labelled"] > 0).sum())
+    adjust = part.design.adjust
+    console.print(
+        f"{result.sample.design.capitalize()} sample: {result.sample.n:,} units, {labelled:,} with reference labels, "
+        f"{strata} {'strata' if strata != 1 else 'stratum'}, {result.total_area_ha.value:,.0f} ha; "
+        f"{part.design.df(part.cells):,.0f} degrees of freedom; "
+        f"{'with' if part.design.fpc else 'without'} finite population correction"
+        f"{'; weights adjusted to ' + adjust.name if adjust else ''}."
+    )
+
+
+def comparison_table(rows: pd.DataFrame, level: float) -> Table:
+    """Estimate and interval of each class and period, beside the mapped and the true area."""
+    heads = ["class", "period", "mapped", "estimate", f"{level:.0%} interval", "truth", "truth inside?"]
+    table = _new_table("Hectares: map, estimate and truth", heads)
+    for row in _records(rows):
+        step = _step(row)
+        numbers = [rounded(row[c], step) for c in ("map_area_ha", "estimate")]
+        inside = row["lower"] <= row["true_area_ha"] <= row["upper"]
+        table.add_row(
+            row["class"],
+            row["period"],
+            *numbers,
+            _limits(row, step),
+            rounded(row["true_area_ha"], step),
+            "yes" if inside else "no",
+        )
+    return table
+
+
+def _title(key: Key) -> str:
+    names = [texts.DEPTHS[key.depth], key.period]
+    return " ".join(n for n in names if n) + (f" (map '{key.map}')" if key.map not in ("", "map") else "")
+
+
+def _rows_of(table: pd.DataFrame, key: Key) -> pd.DataFrame:
+    mine = (table["map"] == key.map) & (table["depth"] == key.depth) & (table["period"] == key.period)
+    return table[mine & (table["domain"] == "")]
+
+
+def _new_table(title: str, columns: Sequence[str]) -> Table:
+    table = Table(title=title, title_justify="left", title_style="bold", header_style="", box=None, pad_edge=False)
+    for i, name in enumerate(columns):
+        table.add_column(name, justify="left" if i == 0 else "right", no_wrap=i > 0, overflow="fold")
+    return table
+
+
+Row = dict[str, Any]
+
+
+def _by_class(rows: pd.DataFrame, measure: str) -> dict[str, Row]:
+    return {str(r["class"]): r for r in _records(rows[rows["measure"] == measure])}
+
+
+def _records(rows: pd.DataFrame) -> list[Row]:
+    return [{str(k): v for k, v in record.items()} for record in rows.to_dict("records")]
+
+
+def _area_table(rows: pd.DataFrame, key: Key, level: float) -> Table:
+    area, share, mapped, bias = (_by_class(rows, m) for m in ("area_ha", "area_share", "map_area_ha", "map_bias_ha"))
+    heads = ["class", *(["mapped"] if mapped else []), "estimate", "SE", f"{level:.0%} interval", "share"]
+    table = _new_table(f"Area of {_title(key)}, hectares", heads + (["map bias"] if mapped else []))
+    for name, row in area.items():
+        step = _step(row)
+        cells = [name, *([rounded(mapped[name]["estimate"], step)] if mapped else [])]
+        cells += [rounded(row["estimate"], step), rounded(row["se"], step), _limits(row, step)]
+        cells += [_percent(share[name]["estimate"])]
+        cells += [rounded(bias[name]["estimate"], step, sign=True)] if mapped else []
+        table.add_row(*cells)
+    return table
+
+
+def _accuracy_table(rows: pd.DataFrame, key: Key, level: float) -> Table:
+    overall = _records(rows[(rows["measure"] == "overall_accuracy") & (rows["class"] == "")])[0]
+    title = f"Accuracy of {_title(key)} with {level:.0%} intervals; overall {_with_limits(overall)}"
+    table = _new_table(title, ["class", "user's accuracy", "producer's accuracy", "F1"])
+    measures = [_by_class(rows, m) for m in ("users_accuracy", "producers_accuracy", "f1")]
+    for name in measures[0]:
+        table.add_row(name, *(_with_limits(m[name]) for m in measures))
+    return table
+
+
+def _matrices(view: View, key: Key) -> list[Table]:
+    kinds = {
+        "Sample counts": (view.counts(), "{:,.0f}"),
+        "Area shares in per cent": (100 * view.area_shares(), "{:.3f}"),
+    }
+    tables = []
+    for title, (matrix, form) in kinds.items():
+        table = _new_table(f"{title}: {_title(key)} (rows map, columns reference)", ["map", *map(str, matrix.columns)])
+        for name, row in zip(matrix.index, matrix.to_numpy(), strict=True):
+            table.add_row(str(name), *(form.format(v) for v in row))
+        tables.append(table)
+    return tables
+
+
+def _show_worst_case(console: Console, result: Result) -> None:
+    rows = result.table[result.table["measure"] == "area_ha_worst_case"]
+    rows = rows[rows["depth"].isin(["label", "change-class", "change"])]
+    if rows.empty:
+        return
+    title = "Worst case for what has no label, hectares (none or all of it is of the class; sampling error included)"
+    table = _new_table(title, ["class", "period", "over", "at least", "at most"])
+    for row in _records(rows):
+        table.add_row(row["class"], row["period"], row["domain"], rounded(row["lower"], 1), rounded(row["upper"], 1))
+    console.print(table)
+
+
+# -- numbers ----------------------------------------------------------------------------------------------
+
+
+def _step(row: Row) -> float:
+    """Precision to show: two figures of the SE, or of the half-width where there is no SE."""
+    scale = row["se"]
+    if not (math.isfinite(scale) and scale > 0):
+        scale = (row["upper"] - row["lower"]) / 2
+    if not (math.isfinite(scale) and scale > 0):
+        return 1.0
+    return float(min(10.0 ** (math.floor(math.log10(scale)) - 1), 1000.0))
+
+
+def rounded(value: float, step: float, *, sign: bool = False) -> str:
+    """Write a number to a precision of `step` (a power of ten); a dash for what is not there."""
+    if not math.isfinite(value):
+        return "–"
+    digits = max(0, -round(math.log10(step)))
+    shown = round(value / step) * step if step >= 1 else value
+    return f"{shown:{'+' if sign else ''},.{digits}f}"
+
+
+def _limits(row: Row, step: float) -> str:
+    if not math.isfinite(row["upper"]):
+        return "–"
+    return f"{rounded(row['lower'], step)} to {rounded(row['upper'], step)}{MARKS.get(row['interval'], '')}"
+
+
+def _with_limits(row: Row) -> str:
+    if not math.isfinite(row["estimate"]):
+        return "not estimable"
+    limits = f" ({row['lower']:.3f} to {row['upper']:.3f}){MARKS.get(row['interval'], '')}"
+    return f"{row['estimate']:.3f}" + (limits if math.isfinite(row["upper"]) else "")
+
+
+def _percent(share: float) -> str:
+    return f"{100 * share:.3g} %" if math.isfinite(share) else "–"
+
+
+# -- tallies ----------------------------------------------------------------------------------------------
+
+
+def show_tally(console: Console, tally: Tally) -> None:
+    """Print transitions, largest first, and what no class covers."""
+    for period, rows in tally.transitions.groupby("period", sort=False):
+        changed = rows[rows["from"] != rows["to"]].sort_values("area_ha", ascending=False)
+        share = changed["area_ha"].sum() / rows["area_ha"].sum()
+        title = f"Mapped transitions {period}: {share:.3%} of {rows['area_ha'].sum():,.0f} ha changed class"
+        table = _new_table(title, ["from", "to", "pixels", "hectares"])
+        for row in _records(changed.head(MOST_CLASSES)):
+            table.add_row(str(row["from"]), str(row["to"]), f"{row['units']:,}", f"{row['area_ha']:,.1f}")
+        console.print(table)
+        if len(changed) > MOST_CLASSES:
+            console.print(f"{len(changed) - MOST_CLASSES} smaller transitions are in the files.", style="dim")
+    unmapped = tally.unmapped
+    if len(unmapped) and unmapped["area_ha"].sum() > 0:
+        console.print(f"Without a class at one date or more: {unmapped['area_ha'].sum():,.1f} ha.", style="dim")
+    show_notices(console, tally.warnings)
+    console.print("Mapped areas are counts: they carry the map's errors and have no interval.", style="dim")
