@@ -126,8 +126,7 @@ class _Voice:
     def tables(self, result: Result, comparison: pd.DataFrame) -> None:
         if not self.console:
             return
-        self.console.print()
-        self.console.print(terminal.comparison_table(comparison, result.level))
+        terminal.show_comparison(self.console, comparison, result.level)
         terminal.show_notices(self.console, result.warnings)
         self.console.print(*texts.CAUTIONS, sep="\n", style="dim")
 

@@ -22,6 +22,7 @@ MOST_CLASSES = 12
 """Tables of more classes are left to the files."""
 
 MOST_MATRIX_CLASSES = 8
+SHOWN = ("area_ha", "users_accuracy", "producers_accuracy", "f1", "overall_accuracy", *texts.DISAGREEMENTS)
 MARKS = {"exact": "ᵉ", "simulated": "ˢ", "zero-count": "ᶻ", "t": "ᵗ"}
 
 
@@ -35,20 +36,21 @@ def show_result(console: Console, result: Result) -> None:
             left_out.append(_title(key))
             continue
         rows = _rows_of(result.table, key)
-        console.print(_area_table(rows, key, result.level))
+        _show_area(console, rows, key, result.level)
         if key.map:
-            console.print(_accuracy_table(rows, key, result.level))
+            _show_accuracy(console, rows, key, result.level)
             if len(contrast.classes) <= MOST_MATRIX_CLASSES:
-                for table in _matrices(View(contrast, result.level), key):
-                    console.print(table)
-        marks |= set(rows["interval"]) & set(MARKS)
+                _show_matrices(console, View(contrast, result.level), key)
+        marks |= set(rows.loc[rows["measure"].isin(SHOWN), "interval"]) & set(MARKS)
     _show_worst_case(console, result)
-    if marks:
-        console.print(*(f"{MARKS[m]} {texts.INTERVALS[m]}." for m in sorted(marks)), sep="\n", style="dim")
+    console.print()
+    for mark in sorted(marks):
+        console.print(f"{MARKS[mark]} {texts.INTERVALS[mark]}.", style="dim")
     if left_out:
         console.print(f"More than {MOST_CLASSES} classes, in the files only: {'; '.join(left_out)}.", style="dim")
     show_notices(console, result.warnings)
-    console.print(*texts.CAUTIONS, sep="\n", style="dim")
+    for caution in texts.CAUTIONS:
+        console.print(caution, style="dim")
 
 
 def show_notices(console: Console, notices: Iterable[Notice]) -> None:
@@ -71,23 +73,24 @@ def _show_sample(console: Console, result: Result) -> None:
     )
 
 
-def comparison_table(rows: pd.DataFrame, level: float) -> Table:
-    """Estimate and interval of each class and period, beside the mapped and the true area."""
+def show_comparison(console: Console, rows: pd.DataFrame, level: float) -> None:
+    """Print estimate and interval of each class and period, beside the mapped and the true area."""
     heads = ["class", "period", "mapped", "estimate", f"{level:.0%} interval", "truth", "truth inside?"]
-    table = _new_table("Hectares: map, estimate and truth", heads)
+    table = _new_table(heads)
     for row in _records(rows):
         step = _step(row)
-        numbers = [rounded(row[c], step) for c in ("map_area_ha", "estimate")]
+        numbers = [rounded(row["map_area_ha"], min(step, 1.0)), rounded(row["estimate"], step)]
         inside = row["lower"] <= row["true_area_ha"] <= row["upper"]
         table.add_row(
             row["class"],
             row["period"],
             *numbers,
             _limits(row, step),
-            rounded(row["true_area_ha"], step),
+            rounded(row["true_area_ha"], min(step, 1.0)),
             "yes" if inside else "no",
         )
-    return table
+    _show(console, "Hectares: map, estimate and truth", table)
+    console.print(texts.NORMAL_CAUTION, style="dim")
 
 
 def _title(key: Key) -> str:
@@ -100,8 +103,14 @@ def _rows_of(table: pd.DataFrame, key: Key) -> pd.DataFrame:
     return table[mine & (table["domain"] == "")]
 
 
-def _new_table(title: str, columns: Sequence[str]) -> Table:
-    table = Table(title=title, title_justify="left", title_style="bold", header_style="", box=None, pad_edge=False)
+def _show(console: Console, title: str, table: Table) -> None:
+    console.print()
+    console.print(title, style="bold")
+    console.print(table)
+
+
+def _new_table(columns: Sequence[str]) -> Table:
+    table = Table(header_style="", box=None, pad_edge=False)
     for i, name in enumerate(columns):
         table.add_column(name, justify="left" if i == 0 else "right", no_wrap=i > 0, overflow="fold")
     return table
@@ -118,42 +127,42 @@ def _records(rows: pd.DataFrame) -> list[Row]:
     return [{str(k): v for k, v in record.items()} for record in rows.to_dict("records")]
 
 
-def _area_table(rows: pd.DataFrame, key: Key, level: float) -> Table:
+def _show_area(console: Console, rows: pd.DataFrame, key: Key, level: float) -> None:
     area, share, mapped, bias = (_by_class(rows, m) for m in ("area_ha", "area_share", "map_area_ha", "map_bias_ha"))
     heads = ["class", *(["mapped"] if mapped else []), "estimate", "SE", f"{level:.0%} interval", "share"]
-    table = _new_table(f"Area of {_title(key)}, hectares", heads + (["map bias"] if mapped else []))
+    table = _new_table(heads + (["map bias"] if mapped else []))
     for name, row in area.items():
         step = _step(row)
-        cells = [name, *([rounded(mapped[name]["estimate"], step)] if mapped else [])]
+        cells = [name, *([rounded(mapped[name]["estimate"], min(step, 1.0))] if mapped else [])]
         cells += [rounded(row["estimate"], step), rounded(row["se"], step), _limits(row, step)]
         cells += [_percent(share[name]["estimate"])]
         cells += [rounded(bias[name]["estimate"], step, sign=True)] if mapped else []
         table.add_row(*cells)
-    return table
+    _show(console, f"Area of {_title(key)}, hectares", table)
 
 
-def _accuracy_table(rows: pd.DataFrame, key: Key, level: float) -> Table:
-    overall = _records(rows[(rows["measure"] == "overall_accuracy") & (rows["class"] == "")])[0]
-    title = f"Accuracy of {_title(key)} with {level:.0%} intervals; overall {_with_limits(overall)}"
-    table = _new_table(title, ["class", "user's accuracy", "producer's accuracy", "F1"])
+def _show_accuracy(console: Console, rows: pd.DataFrame, key: Key, level: float) -> None:
+    overall = {r["measure"]: r for r in _records(rows[rows["class"] == ""])}
+    table = _new_table(["class", "user's accuracy", "producer's accuracy", "F1"])
     measures = [_by_class(rows, m) for m in ("users_accuracy", "producers_accuracy", "f1")]
     for name in measures[0]:
         table.add_row(name, *(_with_limits(m[name]) for m in measures))
-    return table
+    _show(console, f"Accuracy of {_title(key)}, with {level:.0%} intervals", table)
+    names = {"overall accuracy": "overall_accuracy", **{t: m for m, t in texts.DISAGREEMENTS.items()}}
+    names |= {"kappa": "kappa"} if "kappa" in overall else {}
+    console.print("; ".join(f"{title} {_with_limits(overall[m])}" for title, m in names.items()) + ".")
 
 
-def _matrices(view: View, key: Key) -> list[Table]:
+def _show_matrices(console: Console, view: View, key: Key) -> None:
     kinds = {
         "Sample counts": (view.counts(), "{:,.0f}"),
         "Area shares in per cent": (100 * view.area_shares(), "{:.3f}"),
     }
-    tables = []
     for title, (matrix, form) in kinds.items():
-        table = _new_table(f"{title}: {_title(key)} (rows map, columns reference)", ["map", *map(str, matrix.columns)])
+        table = _new_table(["map", *map(str, matrix.columns)])
         for name, row in zip(matrix.index, matrix.to_numpy(), strict=True):
             table.add_row(str(name), *(form.format(v) for v in row))
-        tables.append(table)
-    return tables
+        _show(console, f"{title} of {_title(key)}: rows the map, columns the reference", table)
 
 
 def _show_worst_case(console: Console, result: Result) -> None:
@@ -161,11 +170,11 @@ def _show_worst_case(console: Console, result: Result) -> None:
     rows = rows[rows["depth"].isin(["label", "change-class", "change"])]
     if rows.empty:
         return
-    title = "Worst case for what has no label, hectares (none or all of it is of the class; sampling error included)"
-    table = _new_table(title, ["class", "period", "over", "at least", "at most"])
+    table = _new_table(["class", "period", "over", "at least", "at most"])
     for row in _records(rows):
         table.add_row(row["class"], row["period"], row["domain"], rounded(row["lower"], 1), rounded(row["upper"], 1))
-    console.print(table)
+    title = "Worst case for what has no label, hectares: none, or all, of it is of the class; sampling error included"
+    _show(console, title, table)
 
 
 # -- numbers ----------------------------------------------------------------------------------------------
@@ -216,10 +225,10 @@ def show_tally(console: Console, tally: Tally) -> None:
         changed = rows[rows["from"] != rows["to"]].sort_values("area_ha", ascending=False)
         share = changed["area_ha"].sum() / rows["area_ha"].sum()
         title = f"Mapped transitions {period}: {share:.3%} of {rows['area_ha'].sum():,.0f} ha changed class"
-        table = _new_table(title, ["from", "to", "pixels", "hectares"])
+        table = _new_table(["from", "to", "pixels", "hectares"])
         for row in _records(changed.head(MOST_CLASSES)):
             table.add_row(str(row["from"]), str(row["to"]), f"{row['units']:,}", f"{row['area_ha']:,.1f}")
-        console.print(table)
+        _show(console, title, table)
         if len(changed) > MOST_CLASSES:
             console.print(f"{len(changed) - MOST_CLASSES} smaller transitions are in the files.", style="dim")
     unmapped = tally.unmapped

@@ -12,6 +12,18 @@ CAUTIONS = (
     "A reporting programme's own rules and accredited verification come first.",
 )
 
+NORMAL_CAUTION = (
+    "Where the truth lies outside: normal intervals are too short for rare change of which few or no omissions were "
+    "seen, and the labels are not perfect."
+)
+
+DISAGREEMENTS = {
+    "quantity_disagreement": "quantity disagreement",
+    "allocation_disagreement": "allocation disagreement",
+    "exchange": "of it exchange",
+    "shift": "shift",
+}
+
 DEPTHS = {
     "label": "classes",
     "cover": "cover",
@@ -46,8 +58,8 @@ _NOTICES: dict[str, str] = {
         "of their stratum stand for them; the worst-case rows show what they could change."
     ),
     "partly-labelled-units": (
-        "{units} units are labelled at some dates only; they count as unlabelled here and can serve tables of a "
-        "single date."
+        "Labelled at some dates only: {units} units. They count as unlabelled here and can serve tables of a single "
+        "date."
     ),
     "units-without-map-label": "{units} units have no label of map '{map}'; they count as wrongly mapped.",
     "single-unit-strata": (
@@ -90,7 +102,7 @@ _NOTICES: dict[str, str] = {
     "no-data-at-some-dates": (
         "{units:,} pixels ({area_ha:,.1f} ha) have data at some dates only; they are in no transition."
     ),
-    "units-without-labels": "{none} units have no reference label, {some_dates} are labelled at some dates only.",
+    "units-without-labels": "Without a reference label: {none} units; labelled at some dates only: {some_dates}.",
     "interpreters-differ": "Interpreters differ on {units} of {of} units that two or more of them labelled.",
     "labels-tied": "{units} units had no single most frequent label; the first interpreter's was taken ({examples}).",
     "label-rows-repeated": "{rows} rows repeat an interpreter's earlier labels.",
