@@ -71,13 +71,19 @@ class Totals:
         at = np.clip(np.searchsorted(code[order], other), 0, max(len(code) - 1, 0))
         return np.where(code[order][at] == other, order[at], -1) if len(code) else np.zeros(0, np.intp)
 
-    def by_map(self, pairs: Values, at: Ints | None = None) -> Values:
-        """Sum values of pairs, shape (..., P), by their map class, shape (..., K)."""
-        classes = self.row if at is None else self.row[at]
-        groups = sparse.csr_array(
-            (np.ones(len(classes)), (np.arange(len(classes)), classes)), shape=(len(classes), self.classes)
-        )
-        return pairs @ groups
+    @cached_property
+    def allocation(self) -> Values:
+        """Twice the smaller of commission and omission of each class, as a share; shape (..., K)."""
+        return 2 * np.minimum(self.mapped - self.both, self.reference - self.both) / self.all
+
+    @cached_property
+    def exchange(self) -> Values:
+        """Twice the smaller of each pair of opposite confusions, added up by class, as a share; shape (..., K)."""
+        at = np.flatnonzero(self.twin > np.arange(len(self.twin)))  # each pair once, counted for both its classes
+        smaller = 2 * np.minimum(self.joint[..., at], self.joint[..., self.twin[at]])
+        ones, pairs = np.ones(2 * len(at)), np.tile(np.arange(len(at)), 2)
+        classes = np.concatenate([self.row[at], self.column[at]])
+        return smaller @ sparse.csr_array((ones, (pairs, classes)), shape=(len(at), self.classes)) / self.all
 
 
 # -- area -------------------------------------------------------------------------------------------------
@@ -159,13 +165,12 @@ def quantity_by_class(t: Totals) -> Values:
 
 def allocation_by_class(t: Totals) -> Values:
     """Twice the smaller of commission and omission share (Pontius & Millones 2011, eq. 4); shape (..., K)."""
-    return 2 * np.minimum(t.mapped - t.both, t.reference - t.both) / t.all
+    return t.allocation
 
 
 def exchange_by_class(t: Totals) -> Values:
     """Twice the smaller of each pair of opposite confusions (Pontius & Santacruz 2014, IJRS 35, 7543)."""
-    at = np.flatnonzero((t.twin >= 0) & (t.row != t.column))
-    return t.by_map(2 * np.minimum(t.joint[..., at], t.joint[..., t.twin[at]]), at) / t.all
+    return t.exchange
 
 
 def shift_by_class(t: Totals) -> Values:
@@ -276,36 +281,39 @@ class Contrast:
         return sparse.csr_array((marks.data * size[marks.indices], marks.indices, marks.indptr), shape=marks.shape)
 
     @cached_property
-    def _variables(self) -> dict[str, sparse.csr_array]:
+    def _variables(self) -> tuple[sparse.csr_array, dict[str, slice]]:
+        """Area of one unit of each cell in every total that is wanted, stacked, and where each kind stands."""
         k = len(self.classes)
         agree = np.where(self.map_class == self.reference_class, self.map_class, -1)
         codes, position = self._pair
-        return {
+        kinds = {
             "joint": self._rows(position, len(codes)),
             "mapped": self._rows(self.map_class, k),
             "reference": self._rows(self.reference_class, k),
             "both": self._rows(agree, k),
             "everything": self._rows(np.zeros(len(agree), np.intp), 1),
         }
+        ends = np.cumsum([rows.shape[0] for rows in kinds.values()]).tolist()
+        places = {name: slice(end - rows.shape[0], end) for (name, rows), end in zip(kinds.items(), ends, strict=True)}
+        return sparse.csr_array(sparse.vstack(list(kinds.values()), format="csr")), places
 
-    def _assemble(self, values: dict[str, Values]) -> Totals:
-        codes, _ = self._pair
-        values["everything"] = values["everything"][..., 0]
-        k = max(len(self.classes), 1)
+    def _assemble(self, values: Values) -> Totals:
+        kinds = {name: values[..., place] for name, place in self._variables[1].items()}
+        kinds["everything"] = kinds["everything"][..., 0]
+        codes, k = self._pair[0], max(len(self.classes), 1)
         return Totals(
-            **values, known_area_ha=self.known_area_ha, expansion=self.expansion, row=codes // k, column=codes % k
+            **kinds, known_area_ha=self.known_area_ha, expansion=self.expansion, row=codes // k, column=codes % k
         )
 
     @cached_property
     def totals(self) -> Totals:
         """Totals with their scores."""
-        return self._assemble({name: linearised_totals(y, self.survey) for name, y in self._variables.items()})
+        return self._assemble(linearised_totals(self._variables[0], self.survey))
 
     def totals_at(self, count: Floats) -> Totals:
         """Totals for other counts, shape (..., c): plain arrays with the same leading axes."""
-        cells = self.survey.only.cells.with_count(count)
-        design = self.survey.only.design
-        return self._assemble({name: design.totals(y, cells) for name, y in self._variables.items()})
+        part = self.survey.only
+        return self._assemble(part.design.totals(self._variables[0], part.cells.with_count(count)))
 
     def sample_counts(self) -> NDArray[np.float64]:
         """Sample units by map class (rows) and reference class (columns), shape (K, K)."""

@@ -76,6 +76,7 @@ class TextTable:
     frame: pd.DataFrame
     file: str
     notices: tuple[Notice, ...] = ()
+    _words: dict[str, tuple[NDArray[np.intp], list[str]]] = field(default_factory=dict, repr=False)
 
     def require(self, *names: str) -> None:
         """Refuse the table if one of the columns is missing."""
@@ -122,6 +123,11 @@ class TextTable:
 
     def words(self, name: str) -> tuple[NDArray[np.intp], list[str]]:
         """Distinct texts of a column (stripped) and the position of each row's text among them."""
+        if name not in self._words:
+            self._words[name] = self._distinct(name)
+        return self._words[name]
+
+    def _distinct(self, name: str) -> tuple[NDArray[np.intp], list[str]]:
         codes, distinct = pd.factorize(self.frame[name], use_na_sentinel=False)
         stripped = [str(w).strip() for w in distinct]
         if len(set(stripped)) == len(stripped):
@@ -208,21 +214,33 @@ def _read_csv(path: Path) -> TextTable:
     data, notices = _decoded(path)
     header = _header(data, path.name)
     _check_fields(data, len(header), path.name)
-    frame = pd.read_csv(
-        io.BytesIO(data),
-        dtype=str,
-        keep_default_na=False,
-        na_filter=False,
-        header=0,
-        names=header,
-        index_col=False,
-        skip_blank_lines=False,
-        skipinitialspace=b', "' in data,
-    )
+    frame = _parsed(data, header, path.name)
     end = len(frame)
     while end and not any(frame.iloc[end - 1]):  # blank lines at the end of the file
         end -= 1
     return TextTable(frame.iloc[:end], path.name, notices)
+
+
+def _parsed(data: bytes, header: list[str], file: str) -> pd.DataFrame:
+    """All fields as text, by pyarrow's CSV reader: nothing is inferred, blank lines stay rows."""
+    from pyarrow import ArrowInvalid, py_buffer, string
+    from pyarrow import csv as arrow
+
+    if b"\n\n" in data:
+        data = re.sub(rb"\n(?=\n)", b"\n" + b"," * (len(header) - 1), data)
+    if b', "' in data:
+        data = re.sub(rb', +"', b',"', data)
+    quoted = b'"' in data
+    convert = arrow.ConvertOptions(column_types=dict.fromkeys(header, string()), strings_can_be_null=False)
+    parse = arrow.ParseOptions(newlines_in_values=quoted, ignore_empty_lines=len(header) > 1)
+    read = arrow.ReadOptions(column_names=header, skip_rows=1, block_size=len(data) + 1 if quoted else 1 << 20)
+    try:
+        table = arrow.read_csv(py_buffer(data), read_options=read, parse_options=parse, convert_options=convert)
+    except ArrowInvalid as error:
+        reason = str(error).splitlines()[0]
+        raise InputError(f"the table cannot be read ({reason})", file=file, mend="Save it again as CSV.") from None
+    frame: pd.DataFrame = table.to_pandas(types_mapper={string(): pd.StringDtype("pyarrow")}.get)
+    return frame
 
 
 _BOM = b"\xef\xbb\xbf"
@@ -260,7 +278,8 @@ def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
             row=row,
             mend="Save the file as CSV in UTF-8.",
         ) from None
-    data = data.replace(b"\r\n", b"\n")
+    if b"\r\n" in data:
+        data = data.replace(b"\r\n", b"\n")
     if b"\r" in data:
         data = data.replace(b"\r", b"\n")
         notices.append(Notice("carriage-return-lines", {"file": path.name}))
@@ -541,8 +560,18 @@ def _sample_id(units: TextTable, strata: pd.DataFrame) -> str:
     digest = hashlib.sha256(strata.to_csv().encode())
     for name in PLACE_COLUMNS:
         if name in units.frame.columns:
-            digest.update(name.encode() + b"\0" + "\n".join(units.frame[name].tolist()).encode())
+            digest.update(name.encode() + b"\0" + _column_bytes(units.frame[name]))
     return digest.hexdigest()[:16]
+
+
+def _column_bytes(column: pd.Series[Any]) -> bytes:
+    """All texts of a column, one a line."""
+    import pyarrow as pa
+    from pyarrow import compute
+
+    texts = pa.array(column, type=pa.string())
+    texts = texts.combine_chunks() if isinstance(texts, pa.ChunkedArray) else texts
+    return bytes(compute.binary_join(pa.ListArray.from_arrays([0, len(texts)], texts), "\n")[0].as_buffer())
 
 
 def _check_unit_ids(units: TextTable) -> None:

@@ -30,7 +30,7 @@ ALL_PAIRS_UP_TO = 50
 ROUNDING = 1e-15
 """Shares smaller than this are differences of equal numbers."""
 
-SIMULATED_NUMBERS = 4_000_000
+SIMULATED_NUMBERS = 2_000_000
 """Random numbers that one simulation may draw; the number of simulated samples follows, at least 400."""
 
 
@@ -53,6 +53,10 @@ class Column:
     upper: NDArray[np.float64]
     interval: NDArray[np.object_]
     n: NDArray[np.float64]
+
+
+Block = dict[str, NDArray[Any]]
+"""Columns of the rows of one measure."""
 
 
 class ContrastRows:
@@ -82,33 +86,31 @@ class ContrastRows:
     def frame(self, kappa: bool) -> pd.DataFrame:
         """All rows, without the columns that name the contrast."""
         classes = np.array(self.contrast.classes, dtype=object)
-        blank = np.full(len(classes), "", dtype=object)
+        blank, whole = np.full(len(classes), "", dtype=object), np.array([""], dtype=object)
         blocks = [self._block(name, self._by_class(name), classes, blank) for name in self._class_measures()]
         if self.has_map:
             overall = OVERALL | (ON_REQUEST if kappa else {})
-            blocks += [self._block(name, self._overall(name, m), [""], [""]) for name, m in overall.items()]
+            blocks += [self._block(name, self._overall(name, m), whole, whole) for name, m in overall.items()]
             blocks.append(self._joint_block())
-        return pd.concat(blocks, ignore_index=True)
+        columns = {name: np.concatenate([block[name] for block in blocks]) for name in blocks[0]}
+        return pd.DataFrame(columns).assign(df=self.df, level=self.choice.level)
 
     def _class_measures(self) -> list[str]:
         return list(BY_CLASS) if self.has_map else ["area_ha", "area_share"]
 
-    def _block(self, name: str, c: Column, classes: object, against: object) -> pd.DataFrame:
-        return pd.DataFrame(
-            {
-                "measure": name,
-                "class": classes,
-                "against": against,
-                "estimate": c.value,
-                "se": c.se,
-                "df": self.df,
-                "lower": c.lower,
-                "upper": c.upper,
-                "level": self.choice.level,
-                "interval": c.interval,
-                "n": c.n.astype(np.int64),
-            }
-        )
+    @staticmethod
+    def _block(name: str, c: Column, classes: NDArray[np.object_], against: NDArray[np.object_]) -> Block:
+        return {
+            "measure": np.full(len(classes), name, dtype=object),
+            "class": classes,
+            "against": against,
+            "estimate": c.value,
+            "se": c.se,
+            "lower": c.lower,
+            "upper": c.upper,
+            "interval": c.interval,
+            "n": c.n.astype(np.int64),
+        }
 
     # -- one measure -------------------------------------------------------------------------------------
 
@@ -188,7 +190,7 @@ class ContrastRows:
             self._simulated = self.contrast.totals_at(intervals.simulated_counts(self.part.design, cells, rng, draws))
         return self._simulated
 
-    def _joint_block(self) -> pd.DataFrame:
+    def _joint_block(self) -> Block:
         totals = self.contrast.totals
         column = self._column("joint_share", BY_PAIR["joint_share"], np.full(len(totals.row), self.n_all))
         names = np.array(self.contrast.classes, dtype=object)
