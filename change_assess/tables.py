@@ -213,7 +213,6 @@ def _cell_text(value: Any) -> str:
 def _read_csv(path: Path) -> TextTable:
     data, notices = _decoded(path)
     header = _header(data, path.name)
-    _check_fields(data, len(header), path.name)
     frame = _parsed(data, header, path.name)
     end = len(frame)
     while end and not any(frame.iloc[end - 1]):  # blank lines at the end of the file
@@ -237,6 +236,7 @@ def _parsed(data: bytes, header: list[str], file: str) -> pd.DataFrame:
     try:
         table = arrow.read_csv(py_buffer(data), read_options=read, parse_options=parse, convert_options=convert)
     except ArrowInvalid as error:
+        _refuse_ragged(data, len(header), file)
         reason = str(error).splitlines()[0]
         raise InputError(f"the table cannot be read ({reason})", file=file, mend="Save it again as CSV.") from None
     frame: pd.DataFrame = table.to_pandas(types_mapper={string(): pd.StringDtype("pyarrow")}.get)
@@ -264,7 +264,7 @@ def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
     if data.startswith(_BOM):
         data = data[len(_BOM) :].removeprefix(_BOM)
         notices.append(Notice("byte-order-mark", {"file": path.name, "encoding": "UTF-8"}))
-    if not data.strip():
+    if not data or data.isspace():
         raise InputError("the file is empty", file=path.name, mend="Check that the right file was named.")
     if b"\0" in data:
         raise InputError("this is not a text table", file=path.name, mend="Save it as CSV in UTF-8.")
@@ -306,11 +306,8 @@ def _header(data: bytes, file: str) -> list[str]:
     return names
 
 
-def _check_fields(data: bytes, columns: int, file: str) -> None:
-    """Refuse rows with more or fewer fields than the header (a decimal comma shows up here)."""
-    lines = data.count(b"\n") + (not data.endswith(b"\n"))
-    if b'"' not in data and data.count(b",") == (columns - 1) * lines:
-        return
+def _refuse_ragged(data: bytes, columns: int, file: str) -> None:
+    """Refuse the first row with more or fewer fields than the header (a decimal comma shows up here)."""
     for row, fields in _csv_rows(data, file):
         if len(fields) != columns and not (len(fields) == 0 or (columns > 1 and not any(fields))):
             comma = " A decimal comma makes two fields of one number: use points." if len(fields) > columns else ""
@@ -569,8 +566,8 @@ def _column_bytes(column: pd.Series[Any]) -> bytes:
     import pyarrow as pa
     from pyarrow import compute
 
-    texts = pa.array(column, type=pa.string())
-    texts = texts.combine_chunks() if isinstance(texts, pa.ChunkedArray) else texts
+    texts = pa.array(column)
+    texts = (texts.combine_chunks() if isinstance(texts, pa.ChunkedArray) else texts).cast(pa.string())
     return bytes(compute.binary_join(pa.ListArray.from_arrays([0, len(texts)], texts), "\n")[0].as_buffer())
 
 

@@ -31,7 +31,8 @@ def start(
     path = run_start(
         out, maps=maps or None, sample=sample, strata=strata, dates=run.parts(dates), legend=legend, replace=force
     )
-    run.console(quiet=quiet).print(f"Written {path}. Read its comments, then: change-assess estimate --study {path}")
+    step = "tally" if sample is None else "estimate"
+    run.console(quiet=quiet).print(f"Written {path}. Read its comments, then: change-assess {step} --study {path}")
 
 
 def demo(

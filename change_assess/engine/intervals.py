@@ -135,7 +135,11 @@ def simulated_counts(design: Design, cells: Cells, rng: np.random.Generator, dra
 
 def quantiles(replicates: Floats, level: float) -> tuple[Floats, Floats]:
     """Lower and upper quantile over the first axis, ignoring replicates that are not estimable."""
-    tail = (1 - level) / 2
-    known = np.isfinite(replicates).any(axis=0)
-    lower, upper = np.nanquantile(np.where(known, replicates, 0.0), [tail, 1 - tail], axis=0)
+    tails = [(1 - level) / 2, (1 + level) / 2]
+    finite = np.isfinite(replicates)
+    if finite.all():
+        lower, upper = np.quantile(replicates, tails, axis=0)
+        return lower, upper
+    known = finite.any(axis=0)
+    lower, upper = np.nanquantile(np.where(known, replicates, 0.0), tails, axis=0)
     return np.where(known, lower, np.nan), np.where(known, upper, np.nan)

@@ -34,6 +34,10 @@ SIMULATED_NUMBERS = 2_000_000
 """Random numbers that one simulation may draw; the number of simulated samples follows, at least 400."""
 
 
+COMPLEMENTS = {"commission_error": "users_accuracy", "omission_error": "producers_accuracy"}
+"""Measures that are one minus another, limits included."""
+
+
 @dataclass(frozen=True)
 class IntervalChoice:
     """How limits are made: `default` takes exact limits where they apply, else normal ones."""
@@ -77,6 +81,7 @@ class ContrastRows:
         self.has_map = bool((contrast.map_class >= 0).any())
         self.near_kink: list[str] = []
         self._simulated: Totals | None = None
+        self._columns: dict[str, Column] = {}
         count = self.part.cells.count
         k = len(contrast.classes)
         self.n_all = float(count.sum())
@@ -115,12 +120,19 @@ class ContrastRows:
     # -- one measure -------------------------------------------------------------------------------------
 
     def _by_class(self, name: str) -> Column:
+        if name not in self._columns:
+            self._columns[name] = self._made_by_class(name)
+        return self._columns[name]
+
+    def _made_by_class(self, name: str) -> Column:
         if self.known_map_ha is not None and name in ("map_area_ha", "map_bias_ha"):
             return self._known_map(name)
+        if name in COMPLEMENTS:
+            return _complement(self._by_class(COMPLEMENTS[name]))
         n = np.full(len(self.contrast.classes), self.n_all)
-        if name in ("users_accuracy", "commission_error"):
+        if name == "users_accuracy":
             n = self.n_map
-        elif name in ("producers_accuracy", "omission_error"):
+        elif name == "producers_accuracy":
             n = self.n_reference
         elif name == "f1":
             n = self.n_map + self.n_reference - np.diag(self.contrast.sample_counts())
@@ -226,11 +238,9 @@ class ContrastRows:
         if not self._plain():
             return column
         counts = self.contrast.sample_counts()
-        if name in ("users_accuracy", "commission_error"):
+        if name == "users_accuracy":
             right = np.diag(counts)
-            x = right if name == "users_accuracy" else self.n_map - right
-            stratum = self._stratum_of_map_class()
-            return self._exact(column, x, self.n_map, stratum, np.ones(len(x)))
+            return self._exact(column, right, self.n_map, self._stratum_of_map_class(), np.ones(len(right)))
         if name not in ("area_ha", "area_share"):
             return column
         scale = self.contrast.known_area_ha if name in IN_HECTARES else 1.0
@@ -293,6 +303,10 @@ class ContrastRows:
 def _spread(values: NDArray[Any], at: NDArray[np.intp], onto: NDArray[Any]) -> NDArray[Any]:
     onto[at] = values
     return onto
+
+
+def _complement(c: Column) -> Column:
+    return Column(1 - c.value, c.se, 1 - c.upper, 1 - c.lower, c.interval, c.n)
 
 
 def _without_rounding(share: NDArray[np.float64]) -> NDArray[np.float64]:
