@@ -24,23 +24,23 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
-    from change_assess.demo import demo
     from change_assess.engine.estimate import Estimate, covariance
     from change_assess.engine.intervals import Interval
     from change_assess.errors import ChangeAssessError, DesignError, FileError, InputError
+    from change_assess.first_study import start
     from change_assess.labels.reconcile import reconcile
     from change_assess.legend import ChangeClass, ChangeClasses, Legend
     from change_assess.maps.strata import stratify
     from change_assess.maps.tally import tally
     from change_assess.results.estimate import Result, estimate
     from change_assess.sample.draw import draw
-    from change_assess.start import start
     from change_assess.tables import Sample, read_legend, read_matrix, read_sample
+    from change_assess.walkthrough import demo
 
 __version__ = "0.1.0"
 
 _HOMES = {
-    "change_assess.demo": ["demo"],
+    "change_assess.walkthrough": ["demo"],
     "change_assess.engine.estimate": ["Estimate", "covariance"],
     "change_assess.engine.intervals": ["Interval"],
     "change_assess.errors": ["ChangeAssessError", "DesignError", "FileError", "InputError"],
@@ -50,7 +50,7 @@ _HOMES = {
     "change_assess.maps.tally": ["tally"],
     "change_assess.results.estimate": ["Result", "estimate"],
     "change_assess.sample.draw": ["draw"],
-    "change_assess.start": ["start"],
+    "change_assess.first_study": ["start"],
     "change_assess.tables": ["Sample", "read_legend", "read_matrix", "read_sample"],
 }
 _HOME_OF = {name: module for module, names in _HOMES.items() for name in names}

@@ -48,7 +48,7 @@ SCHEMA: dict[str, dict[str, str]] = {
         "strata_raster": "path",
         "strata": "path",
         "size": "texts",
-        "maps": "paths",
+        "raster": "paths",
         "dates": "texts",
         "legend": "legend",
         "seed": "whole",

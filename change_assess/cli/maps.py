@@ -93,7 +93,7 @@ def draw(
     size: Annotated[
         list[str] | None, typer.Option("--size", help="STRATUM=UNITS: how many units to draw; repeat.")
     ] = None,
-    maps: Annotated[
+    raster: Annotated[
         list[str] | None, typer.Option("--raster", help="Map whose labels to add, one a date; repeat.")
     ] = None,
     dates: o.Dates = None,
@@ -112,7 +112,7 @@ def draw(
         "strata_raster": strata_raster,
         "strata": strata,
         "size": size,
-        "maps": maps,
+        "raster": raster,
         "dates": dates,
         "legend": legend,
         "seed": seed,
@@ -134,7 +134,7 @@ def draw(
             options["strata"],
             sizes,
             seed=options["seed"],
-            maps=options.get("maps"),
+            maps=options.get("raster"),
             **_map_options(options),
             progress=progress,
         )

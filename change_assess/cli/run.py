@@ -30,7 +30,8 @@ def settled(command: str, study: Path | None, given: Mapping[str, Any]) -> dict[
 def require(options: Mapping[str, Any], **flags: str) -> None:
     """Refuse to go on without an option; `flags` maps its key to what to write on the command line."""
     for key, flag in flags.items():
-        if not options.get(key):
+        value = options.get(key)
+        if value is None or (isinstance(value, (str, list)) and not value):
             raise InputError(f"{flag} is missing", mend=f"Give it as a flag, or as '{key}' in the study file.")
 
 

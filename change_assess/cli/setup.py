@@ -26,7 +26,7 @@ def start(
     Example: change-assess start map_2016.tif map_2019.tif
     or: change-assess start --sample sample.csv --strata strata.csv
     """
-    from change_assess.start import start as run_start
+    from change_assess.first_study import start as run_start
 
     path = run_start(
         out, maps=maps or None, sample=sample, strata=strata, dates=run.parts(dates), legend=legend, replace=force
@@ -45,6 +45,6 @@ def demo(
 
     Example: change-assess demo demo/
     """
-    from change_assess.demo import demo as run_demo
+    from change_assess.walkthrough import demo as run_demo
 
     run_demo(folder, size=size, seed=seed, console=run.console(quiet=quiet))

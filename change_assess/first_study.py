@@ -59,7 +59,7 @@ out = "strata"
 # strata_raster = "strata/strata.tif"
 # strata = "strata/strata.csv"
 # size = ["no change=500", "forest loss=150"]
-# maps = {maps}
+# raster = {maps}
 # seed = 1
 # out = "sample"
 """
