@@ -32,9 +32,11 @@ if TYPE_CHECKING:
     from change_assess.legend import ChangeClass, ChangeClasses, Legend
     from change_assess.maps.strata import stratify
     from change_assess.maps.tally import tally
-    from change_assess.results.estimate import Result, estimate
+    from change_assess.results.estimate import estimate
+    from change_assess.results.result import Result
     from change_assess.sample.draw import draw
-    from change_assess.tables import Sample, read_legend, read_matrix, read_sample
+    from change_assess.samples import Sample, read_matrix, read_sample
+    from change_assess.tables import read_legend
     from change_assess.walkthrough import demo
 
 __version__ = "0.1.0"
@@ -48,10 +50,12 @@ _HOMES = {
     "change_assess.legend": ["ChangeClass", "ChangeClasses", "Legend"],
     "change_assess.maps.strata": ["stratify"],
     "change_assess.maps.tally": ["tally"],
-    "change_assess.results.estimate": ["Result", "estimate"],
+    "change_assess.results.estimate": ["estimate"],
+    "change_assess.results.result": ["Result"],
     "change_assess.sample.draw": ["draw"],
     "change_assess.first_study": ["start"],
-    "change_assess.tables": ["Sample", "read_legend", "read_matrix", "read_sample"],
+    "change_assess.samples": ["Sample", "read_matrix", "read_sample"],
+    "change_assess.tables": ["read_legend"],
 }
 _HOME_OF = {name: module for module, names in _HOMES.items() for name in names}
 

@@ -8,8 +8,10 @@ ChangeAssessError
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
 from difflib import get_close_matches
+from typing import Any
 
 
 class ChangeAssessError(Exception):
@@ -65,3 +67,11 @@ def nearest(word: object, known: Iterable[object]) -> str:
     folded = {w.casefold(): w for w in reversed(words)}
     close = get_close_matches(str(word).casefold(), folded, n=1, cutoff=0.5)
     return f" Did you mean '{folded[close[0]]}'?" if close else ""
+
+
+@dataclass(frozen=True)
+class Notice:
+    """Something the reader of a result must know: a stable code and the facts that `reporting.texts` words."""
+
+    code: str
+    facts: Mapping[str, Any] = field(default_factory=dict)

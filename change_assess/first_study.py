@@ -5,11 +5,12 @@ from __future__ import annotations
 import json
 import os
 from collections.abc import Sequence
+from dataclasses import dataclass, field
 from pathlib import Path
 
 from change_assess import files
 from change_assess.errors import InputError
-from change_assess.legend import Legend
+from change_assess.legend import Legend, LegendClass
 from change_assess.tables import LegendSource, TextTable, legend_of_labels, read_legend, read_table
 
 NOT_LABELS = {
@@ -37,22 +38,24 @@ format = 1
 
 [study]
 title = "Name your study"
-{dates}
-# Classes that were found. Give each its name; colour and group are optional. A group can be used in recipes.
-legend = [
-{legend}
-]
+{shared}
 # Named change classes: NAME=FROM,…>TO,…  First match wins; * is every class that the other side does not name.
 # change_class = ["forest loss=forest>*", "forest gain=*>forest"]
 """
 
+_LEGEND = """\
+# Classes that were found. Give each its name; colour and group are optional. A group can be used in recipes.
+legend = [
+{classes}
+]"""
+
 _MAPS = """
 [tally]
-maps = {maps}
+maps = {maps}{own}
 out = "tally"
 
 [stratify]
-maps = {maps}
+maps = {maps}{own}
 out = "strata"
 
 # [draw]
@@ -75,9 +78,12 @@ sample = {sample}
 # unsampled = ["exclude"]
 level = 0.95
 fpc = true
-# column = ["unit=their_name_of_it"]
+# column = ["unit=their_name_of_it"]{own}
 out = "results"
 """
+
+
+_APART = "# The labels of the sample are not those of the maps: better give both one legend, under [study]."
 
 
 def start(
@@ -122,43 +128,70 @@ def start(
         )
     if not maps and sample is None:
         raise InputError("there is nothing to start from", mend="Name map rasters, or a sample with --sample.")
-    found: Legend | None = None if legend is None else read_legend(legend)
-    sections = ""
-    if maps:
-        from change_assess.maps.tally import tally
-
-        counted = tally(maps, dates=dates, legend=found)
-        dates = list(counted.dates)
-        found = found or _legend_of_codes(counted.trajectories[dates].to_numpy().ravel().tolist())
-        sections += _MAPS.format(maps=_listed([_relative(m, path) for m in maps]))
-    if sample is not None:
-        table = read_table(sample, "sample")
-        columns = _label_columns(table)
-        found = found or legend_of_labels([(table, [*columns["map"], *columns["ref"]])])
-        sections += _tables_section(path, sample, strata, table, columns)
-    assert found is not None
+    given = None if legend is None else read_legend(legend)
+    of_maps = _of_maps(maps, dates, given) if maps else None
+    of_sample = _of_sample(sample, given) if sample is not None else None
+    one = of_maps is None or of_sample is None or of_sample.fits(of_maps)
+    shared = of_maps or of_sample
+    assert shared is not None
+    own = (
+        "" if one else "\n{}\n# The labels of the sample are not those of the maps: give both one legend under [study]."
+    )
     head = _HEAD.format(
         name=path.name,
         example="estimate" if sample is not None else "tally",
-        dates=f"dates = {_listed(dates)}" if dates else '# dates = ["2016", "2019"]',
-        legend="\n".join(f"    {_class_line(c.code, c.name, c.colour, c.group)}," for c in found.classes),
+        shared=shared.lines() if one else "# Each command below has its own legend and dates.",
     )
+    sections = ""
+    if of_maps:
+        paths = _listed([_relative(m, path) for m in maps or ()])
+        sections += _MAPS.format(maps=paths, own=own.format(of_maps.lines()))
+    if of_sample and sample is not None:
+        sections += _tables_section(path, sample, strata, of_sample, own.format(of_sample.lines()))
     return files.write_text(path, head + sections)
+
+
+@dataclass(frozen=True)
+class _Found:
+    """Classes and dates that the maps, or the sample, hold."""
+
+    legend: Legend
+    dates: tuple[str, ...]
+    table: TextTable | None = None
+    columns: dict[str, list[str]] = field(default_factory=dict)
+
+    def fits(self, maps: _Found) -> bool:
+        """Whether the labels of this sample are classes of the maps, at as many dates."""
+        known = all(maps.legend.index(name) is not None for name in self.legend.names)
+        return known and len(self.columns["ref"]) in (0, len(maps.dates))
+
+    def lines(self) -> str:
+        """Dates and legend as they stand in the study file."""
+        dates = f"dates = {_listed(self.dates)}" if self.dates else '# dates = ["2016", "2019"]'
+        classes = "\n".join(f"    {_class_line(c.code, c.name, c.colour, c.group)}," for c in self.legend.classes)
+        return f"{dates}\n{_LEGEND.format(classes=classes)}"
+
+
+def _of_maps(maps: Sequence[str], dates: Sequence[str] | None, legend: Legend | None) -> _Found:
+    from change_assess.maps.tally import tally
+
+    counted = tally(maps, dates=dates, legend=legend)
+    codes = {int(c) for c in counted.trajectories[list(counted.dates)].to_numpy().ravel()} if legend is None else set()
+    found = legend or Legend(tuple(LegendClass(code, f"class {code}") for code in sorted(codes)))
+    return _Found(found, counted.dates)
+
+
+def _of_sample(sample: str | Path, legend: Legend | None) -> _Found:
+    table = read_table(sample, "sample")
+    columns = _label_columns(table)
+    return _Found(
+        legend or legend_of_labels([(table, [*columns["map"], *columns["ref"]])]), (), table=table, columns=columns
+    )
 
 
 def _class_line(code: int, name: str, colour: str, group: str) -> str:
     extra = "".join(f", {k} = {_text(v)}" for k, v in (("colour", colour), ("group", group)) if v)
     return f"{{ code = {code}, name = {_text(name)}{extra} }}"
-
-
-def _legend_of_codes(codes: Sequence[int]) -> Legend:
-    return legend_of_labels([]) if not codes else _named_codes(sorted({int(c) for c in codes}))
-
-
-def _named_codes(codes: Sequence[int]) -> Legend:
-    from change_assess.legend import LegendClass
-
-    return Legend(tuple(LegendClass(code, f"class {code}") for code in codes))
 
 
 def _label_columns(table: TextTable) -> dict[str, list[str]]:
@@ -167,18 +200,18 @@ def _label_columns(table: TextTable) -> dict[str, list[str]]:
     return {kind: [c for c in few if c.casefold().startswith(kind)] for kind in ("map", "ref")}
 
 
-def _tables_section(
-    path: Path, sample: str | Path, strata: str | Path | None, table: TextTable, columns: dict[str, list[str]]
-) -> str:
-    mapped, reference = columns["map"], columns["ref"]
+def _tables_section(path: Path, sample: str | Path, strata: str | Path | None, found: _Found, own: str) -> str:
+    assert found.table is not None
+    mapped, reference = found.columns["map"], found.columns["ref"]
     if len(mapped) != len(reference):
         mapped = []
     return _TABLES.format(
         sample=_text(_relative(sample, path)),
         strata=f"strata = {_text(_relative(strata, path))}" if strata else '# strata = "strata.csv"',
-        columns=", ".join(map(str, table.frame.columns)),
+        columns=", ".join(map(str, found.table.frame.columns)),
         map=f"map = {_listed([','.join(mapped)])}" if mapped else '# map = ["map_2016,map_2019"]',
         reference=f"reference = {_listed(reference)}" if reference else '# reference = ["ref_2016", "ref_2019"]',
+        own=own,
     )
 
 

@@ -16,9 +16,10 @@ from change_assess.maps.grid import open_maps, whole_map
 from change_assess.maps.strata import stratify
 from change_assess.maps.tally import Tally, tally
 from change_assess.reporting import figures, terminal, texts
-from change_assess.results.estimate import Result, estimate
+from change_assess.results.estimate import estimate
+from change_assess.results.result import Result
 from change_assess.sample.draw import draw
-from change_assess.tables import read_sample
+from change_assess.samples import read_sample
 
 if TYPE_CHECKING:
     from rich.console import Console
@@ -87,7 +88,7 @@ def demo(
     -------
     result : Result
     comparison : DataFrame
-        `period, class, estimate, se, lower, upper, map_area_ha, true_area_ha` of the change classes.
+        `period, class, estimate, se, lower, upper, interval, map_area_ha, true_area_ha` of the change classes.
     """
     folder = Path(folder)
     say = _Voice(console)
@@ -102,7 +103,7 @@ def demo(
     say("Drawing a stratified sample and labelling it (three invented interpreters, not perfect) …")
     labelled = _labelled_sample(folder, maps, paths, seed)
     say("Estimating …")
-    result = _estimated(folder, maps, counted, labelled)
+    result = _estimated(folder, maps, counted)
     comparison = _comparison(result, maps)
     files.write_text(folder / "results" / "estimate_map_truth.csv", comparison.to_csv(index=False, lineterminator="\n"))
     drawn = _figures(folder, maps, result, comparison, labelled.sample)
@@ -153,20 +154,24 @@ def _labelled_sample(folder: Path, maps: scenario.ScenarioMaps, paths: list[str]
     return merged
 
 
-def _estimated(folder: Path, maps: scenario.ScenarioMaps, counted: Tally, labelled: Reconciled) -> Result:
+def _estimated(folder: Path, maps: scenario.ScenarioMaps, counted: Tally) -> Result:
     columns = {d: f"map_{d}" for d in maps.dates}
+    inputs = {
+        "sample": folder / "labels" / "labelled_sample.csv",
+        "strata": folder / "strata" / "strata.csv",
+        "crossing": folder / "crossing.csv",
+    }
     crossing = counted.crossing().rename(columns=columns)
-    files.write_text(folder / "crossing.csv", crossing.to_csv(index=False, lineterminator="\n"))
-    sample = read_sample(labelled.sample, folder / "strata" / "strata.csv", crossing=crossing)
+    files.write_text(inputs["crossing"], crossing.to_csv(index=False, lineterminator="\n"))
     result = estimate(
-        sample,
+        read_sample(inputs["sample"], inputs["strata"], crossing=inputs["crossing"]),
         map=list(columns.values()),
         reference=[f"ref_{d}" for d in maps.dates],
         dates=maps.dates,
         legend=maps.legend,
         change_classes=RECIPES,
     )
-    result.save(folder / "results", {"strata": folder / "strata" / "strata.csv", "crossing": folder / "crossing.csv"})
+    result.save(folder / "results", inputs)
     return result
 
 

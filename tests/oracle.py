@@ -13,8 +13,9 @@ import pandas as pd
 
 from change_assess.engine.estimate import Estimate
 from change_assess.measures import area_share, map_share
-from change_assess.results.estimate import Result, View, estimate
-from change_assess.tables import Sample, read_sample
+from change_assess.results.estimate import estimate
+from change_assess.results.result import Result, View
+from change_assess.samples import Sample, read_sample
 
 CASES = sorted((Path(__file__).parent / "data" / "oracle" / "cases").iterdir())
 

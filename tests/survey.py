@@ -15,8 +15,9 @@ from scipy import sparse
 from change_assess.engine.cells import Cells
 from change_assess.engine.design import Design
 from change_assess.engine.linearise import Linearised, Survey, linearised_totals
-from change_assess.results.estimate import Result, estimate
-from change_assess.tables import read_matrix
+from change_assess.results.estimate import estimate
+from change_assess.results.result import Result
+from change_assess.samples import read_matrix
 
 DATA = Path(__file__).parent / "data"
 

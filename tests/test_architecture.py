@@ -18,8 +18,8 @@ import pytest
 from oracle import CASES, Case
 
 import change_assess as ca
+from change_assess.errors import Notice
 from change_assess.reporting import texts
-from change_assess.tables import Notice
 
 PACKAGE = Path(ca.__file__).parent
 
@@ -29,7 +29,9 @@ FLOORS = {
     "legend": 1,
     "engine": 1,
     "measures": 2,
+    "csvfile": 2,
     "tables": 2,
+    "samples": 2,
     "vectors": 2,
     "study": 2,
     "maps": 3,
@@ -44,14 +46,14 @@ FLOORS = {
 }
 """Floor of each room; a room imports only from floors below."""
 
-SIBLINGS = {("tables", "vectors"), ("walkthrough", "scenario")}
+SIBLINGS = {("tables", "vectors"), ("samples", "tables"), ("tables", "csvfile"), ("walkthrough", "scenario")}
 """The only imports between rooms of one floor, from the first to the second."""
 
 DOORS = {
     "rasterio": {"maps.grid", "maps.cells", "maps.strata", "maps.tally"},
     "geopandas": {"vectors"},
     "pyogrio": {"vectors"},
-    "pyarrow": {"tables"},
+    "pyarrow": {"csvfile", "samples"},
     "pyproj": {"maps.area", "sample.draw"},
     "matplotlib": {"reporting.figures"},
     "rich": {"reporting.terminal", "cli.run"},

@@ -574,7 +574,7 @@ def test_unsampled_strata_can_be_left_out_or_filled(tables):
     """--unsampled exclude shrinks the target area; STRATUM=INTO keeps it and says what is assumed."""
     write(tables, {"strata.csv": STRATA + "water,50,4.75\n"})
     out = done("estimate", *estimate_flags(tables, unsampled="exclude", out=tables / "excluded")).out
-    assert "1 strata have no labelled unit and are left out: 5 ha" in out
+    assert "Strata without a labelled unit, left out: 1, with 5 ha" in out
     out = done("estimate", *estimate_flags(tables, unsampled="water=stable", out=tables / "assumed")).out
     assert "are assumed, not sampled" in out
     for name, area in (("excluded", 94.75), ("assumed", 99.5)):

@@ -17,8 +17,9 @@ from scipy.stats import norm
 from change_assess.errors import DesignError
 from change_assess.labels.reconcile import Reconciled, reconcile
 from change_assess.reporting.texts import notice_text
-from change_assess.results.estimate import Result, estimate
-from change_assess.tables import Sample, read_sample
+from change_assess.results.estimate import estimate
+from change_assess.results.result import Result
+from change_assess.samples import Sample, read_sample
 
 FLANDERS = Path(__file__).parent / "data" / "flanders"
 RECIPES = ("forest loss=Bos>*", "forest gain=*>Bos")
@@ -127,7 +128,7 @@ def test_the_command_line_gives_the_same(result, strata, tmp_path):
     line = refused("estimate", *flags)
     assert "16 of 81 strata have no labelled unit" in line
     out = done("estimate", *flags, "--unsampled", "exclude").out
-    assert "16 strata have no labelled unit and are left out: 384,887 ha, 22.5% of the area" in out
+    assert "Strata without a labelled unit, left out: 16, with 384,887 ha, 22.5% of the area" in out
     assert "13 of 3815 selected units in 12 strata have no complete reference label" in out
     table = estimates(tmp_path / "results")
     numbers = ["estimate", "se", "df", "lower", "upper", "n"]

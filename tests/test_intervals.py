@@ -30,6 +30,15 @@ def test_exact_limits_of_thirteen_of_sixteen():
 
 
 @pytest.mark.parametrize("level", LEVELS)
+def test_exact_limits_agree_with_statsmodels(level):
+    """Clopper-Pearson limits are those of statsmodels' "beta" method, none and all included."""
+    proportion = pytest.importorskip("statsmodels.stats.proportion")
+    x, n = np.array([0, 1, 7, 20, 299, 300]), 300
+    wanted = proportion.proportion_confint(x, n, alpha=1 - level, method="beta")
+    assert np.ravel(exact(x, n, None, level)) == pytest.approx(np.nan_to_num(np.ravel(wanted), nan=0.0), abs=1e-12)
+
+
+@pytest.mark.parametrize("level", LEVELS)
 @pytest.mark.parametrize("n", [1, 2, 3, 7, 20, 100, 3000])
 def test_exact_limits_agree_with_an_independent_implementation(n, level):
     """On a grid of counts, none and all included, the limits are those of SciPy's exact binomial interval."""

@@ -21,9 +21,10 @@ from change_assess.engine.intervals import exact
 from change_assess.engine.linearise import Survey
 from change_assess.errors import DesignError
 from change_assess.measures import f1, kappa, overall_accuracy
-from change_assess.results.estimate import Result, View, estimate
+from change_assess.results.estimate import estimate
 from change_assess.results.population import survey_of
-from change_assess.tables import Sample, read_sample
+from change_assess.results.result import Result, View
+from change_assess.samples import Sample, read_sample
 
 KINDS = ("simple", "stratified", "post-stratified", "cluster")
 ELEMENTS = KINDS[:3]

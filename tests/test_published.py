@@ -27,7 +27,8 @@ from survey import (
 from change_assess.engine.estimate import Estimate, Known
 from change_assess.engine.intervals import exact
 from change_assess.measures import map_share
-from change_assess.results.estimate import Result, estimate
+from change_assess.results.estimate import estimate
+from change_assess.results.result import Result
 
 EXAMPLES = sorted(path.stem for path in (DATA / "published").glob("*.json"))
 

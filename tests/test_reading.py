@@ -9,8 +9,10 @@ import pandas as pd
 import pytest
 
 from change_assess.errors import ChangeAssessError, DesignError, FileError, InputError
-from change_assess.results.estimate import Result, estimate
-from change_assess.tables import read_legend, read_matrix, read_sample, read_table
+from change_assess.results.estimate import estimate
+from change_assess.results.result import Result
+from change_assess.samples import read_matrix, read_sample
+from change_assess.tables import read_legend, read_table
 
 SAMPLE = """unit,stratum,map,ref
 u1,loss,loss,loss

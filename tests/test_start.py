@@ -167,3 +167,24 @@ def test_nothing_to_start_from_is_refused(tmp_path):
         start(tmp_path / "study.toml")
     assert "does not exist" in refused("start", "--sample", tmp_path / "nowhere.csv", "--out", tmp_path / "study.toml")
     assert contents(tmp_path) == {}
+
+
+def test_maps_and_a_sample_with_other_labels_can_both_be_used(maps):
+    """Codes in the maps and names in the sample get a legend each, so that tally and estimate both run."""
+    write(maps, TABLES)
+    study = maps / "study.toml"
+    done(
+        "start",
+        maps / "map_2016.tif",
+        maps / "map_2019.tif",
+        "--sample",
+        maps / "sample.csv",
+        "--strata",
+        maps / "strata.csv",
+        "--out",
+        study,
+    )
+    done("tally", "--study", study, "--quiet")
+    done("estimate", "--study", study, "--map", "map", "--reference", "ref", "--quiet")
+    assert read_legend(read_study(study).options("tally")["legend"]).codes == [1, 2, 7]
+    assert (maps / "results" / "estimates.csv").exists()

@@ -173,7 +173,7 @@ def _estimated(options: dict[str, Any], *, quiet: bool) -> tuple[Any, dict[str, 
 
 
 def _sample(options: dict[str, Any], *, quiet: bool) -> tuple[Any, dict[str, Any]]:
-    from change_assess.tables import read_matrix, read_sample
+    from change_assess.samples import read_matrix, read_sample
 
     columns = run.pairs(options.get("column") or [], "--column")
     if options.get("matrix"):

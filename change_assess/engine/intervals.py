@@ -23,7 +23,7 @@ from change_assess.engine.cells import Cells, Floats
 from change_assess.engine.design import Design, indicator_of
 from change_assess.errors import InputError
 
-DRAWS = 2000
+DRAWS = 4000
 """Simulated samples behind a ``simulated`` interval."""
 
 

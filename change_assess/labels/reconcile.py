@@ -16,9 +16,9 @@ from typing import Literal
 import numpy as np
 import pandas as pd
 
-from change_assess.errors import InputError, nearest
+from change_assess.errors import InputError, Notice, nearest
 from change_assess.files import write_together
-from change_assess.tables import Notice, Table, TextTable, read_table
+from change_assess.tables import Table, TextTable, read_table
 
 Rule = Literal["first", "majority"]
 

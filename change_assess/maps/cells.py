@@ -14,8 +14,7 @@ from numpy.typing import NDArray
 from rasterio.windows import Window
 
 from change_assess.errors import InputError
-from change_assess.maps.grid import Grid, MapStack, Reader, block_cache
-from change_assess.maps.tally import Progress
+from change_assess.maps.grid import Grid, MapStack, Progress, Reader, block_cache
 
 CELL = 512
 """Side of the cells, in pixels. With another value the same seed would give another sample."""

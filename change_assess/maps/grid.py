@@ -10,7 +10,7 @@ import math
 import os
 import re
 import warnings
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import cached_property
@@ -38,6 +38,10 @@ RESERVED_LABELS = frozenset({"stratum", "units", "area_ha", "period", "from", "t
 
 WINDOW_PIXELS, LARGEST_STEP = 2048 * 2048, 4096
 SMALL_CACHE_BYTES, LARGE_CACHE_BYTES = 1_000_000, 64_000_000
+
+
+Progress = Callable[[int, int], object]
+"""Called with (pixels done, pixels in all)."""
 
 
 @dataclass(frozen=True)

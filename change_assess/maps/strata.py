@@ -17,8 +17,8 @@ from rasterio.windows import Window
 
 from change_assess.errors import InputError, nearest
 from change_assess.legend import ARROW, CHANGE, NO_CHANGE, ChangeClass, ChangeClasses, Legend
-from change_assess.maps.grid import Coder, MapSource, MapStack, Reader, block_cache, new_raster, open_maps
-from change_assess.maps.tally import Combination, Progress, Tally, assembled, count_stack, executor_of, in_order
+from change_assess.maps.grid import Coder, MapSource, MapStack, Progress, Reader, block_cache, new_raster, open_maps
+from change_assess.maps.tally import Combination, Tally, assembled, count_stack, executor_of, in_order
 from change_assess.tables import LegendSource, read_legend
 
 TILE = 512

@@ -18,16 +18,13 @@ import pandas as pd
 from rasterio.windows import Window
 
 from change_assess import __version__
-from change_assess.errors import InputError
+from change_assess.errors import InputError, Notice
 from change_assess.files import write_together
 from change_assess.legend import Legend
 from change_assess.maps.area import NOTED_DISTORTION
 from change_assess.maps.count import CombinationCounts, whole_weights
-from change_assess.maps.grid import Coder, MapSource, MapStack, Reader, block_cache, open_maps
-from change_assess.tables import LegendSource, Notice, read_legend
-
-Progress = Callable[[int, int], object]
-"""Called from the main thread with pixels done and pixels in all."""
+from change_assess.maps.grid import Coder, MapSource, MapStack, Progress, Reader, block_cache, open_maps
+from change_assess.tables import LegendSource, read_legend
 
 Combination = tuple[int, ...]
 """Class codes of one pixel, one a date."""

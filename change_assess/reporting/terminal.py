@@ -11,9 +11,9 @@ from rich.console import Console
 from rich.table import Table
 from rich.text import Text
 
+from change_assess.errors import Notice
 from change_assess.reporting import texts
-from change_assess.results.estimate import Key, Result, View
-from change_assess.tables import Notice
+from change_assess.results.result import Key, Result, View
 
 if TYPE_CHECKING:
     from change_assess.maps.tally import Tally

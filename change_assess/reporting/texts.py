@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from typing import Any
 
-from change_assess.tables import Notice
+from change_assess.errors import Notice
 
 CAUTIONS = (
     "Estimates describe areas in aggregate. They say nothing about a single parcel.",
@@ -46,11 +46,11 @@ _NOTICES: dict[str, str] = {
     "byte-order-mark": "{file} begins with a byte-order mark ({encoding}); it was read past.",
     "carriage-return-lines": "{file} ends lines with carriage returns alone; they were read as line ends.",
     "unsampled-strata-excluded": (
-        "{strata} strata have no labelled unit and are left out: {area_ha:,.0f} ha, {share:.1%} of the area "
+        "Strata without a labelled unit, left out: {strata}, with {area_ha:,.0f} ha, {share:.1%} of the area "
         "({names}). All figures, mapped areas included, are for the rest; the worst-case rows say what could be there."
     ),
     "unsampled-strata-assumed": (
-        "{strata} strata have no labelled unit; they are assumed to be like other strata ({names} like {from}): "
+        "Strata without a labelled unit, assumed to be like others ({names} like {from}): {strata}, with "
         "{area_ha:,.0f} ha, {share:.1%} of the area, are assumed, not sampled. The worst-case rows say what that hides."
     ),
     "unlabelled-units": (

@@ -12,9 +12,10 @@ from numpy.typing import NDArray
 from change_assess.engine.cells import Cells
 from change_assess.engine.design import Calibration, Design
 from change_assess.engine.linearise import Survey
-from change_assess.errors import DesignError, InputError, nearest
+from change_assess.errors import DesignError, InputError, Notice, nearest
 from change_assess.legend import Legend
-from change_assess.tables import LABELLED, OUTSIDE, STATUS, Notice, Sample, label_codes
+from change_assess.samples import LABELLED, OUTSIDE, STATUS, Sample
+from change_assess.tables import label_codes
 
 EXCLUDE = "exclude"
 ESTIMATORS = ("combined", "separate", "expansion")

@@ -19,8 +19,7 @@ from change_assess.files import sha256, write_text
 from change_assess.legend import Legend, whole_number
 from change_assess.maps.area import parsed
 from change_assess.maps.cells import CELL, cell_counts, codes_at, pixels_of_ranks
-from change_assess.maps.grid import MapSource, MapStack, check_same_grid, open_maps
-from change_assess.maps.tally import Progress
+from change_assess.maps.grid import MapSource, MapStack, Progress, check_same_grid, open_maps
 from change_assess.tables import LegendSource, Table, read_legend, read_table
 from change_assess.vectors import write_points
 

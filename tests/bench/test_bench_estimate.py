@@ -12,7 +12,7 @@ import pandas as pd
 import pytest
 
 from change_assess.results.estimate import estimate
-from change_assess.tables import read_sample
+from change_assess.samples import read_sample
 
 pytestmark = pytest.mark.bench
 UNITS, CLASSES = 200_000, 20
