@@ -46,26 +46,35 @@ def read_csv(path: Path) -> tuple[pd.DataFrame, str, tuple[Notice, ...]]:
 
 
 def _parsed(data: bytes, header: list[str], file: str) -> pd.DataFrame:
-    """All fields as text, by pyarrow's CSV reader: nothing is inferred, blank lines stay rows."""
-    from pyarrow import ArrowInvalid, py_buffer, string
-    from pyarrow import csv as arrow
+    """All fields as text; blank lines stay rows, so that rows keep their numbers."""
+    from pyarrow import ArrowInvalid
 
-    if b"\n\n" in data:
-        data = re.sub(rb"\n(?=\n)", b"\n" + b"," * (len(header) - 1), data)
-    if b', "' in data:
+    if b'"' in data:
         data = re.sub(rb', +"', b',"', data)
-    quoted = b'"' in data
-    convert = arrow.ConvertOptions(column_types=dict.fromkeys(header, string()), strings_can_be_null=False)
-    parse = arrow.ParseOptions(newlines_in_values=quoted, ignore_empty_lines=len(header) > 1)
-    block = len(data) + 1 if quoted else 1 << 20
-    # without threads: pyarrow's pool can abort a process that ends while it winds down
-    read = arrow.ReadOptions(use_threads=False, column_names=header, skip_rows=1, block_size=block)
     try:
-        table = arrow.read_csv(py_buffer(data), read_options=read, parse_options=parse, convert_options=convert)
+        return _fields(data, header)
+    except ArrowInvalid:
+        filled = re.sub(rb"\n(?=\n)", b"\n" + b"," * (len(header) - 1), data)
+    try:
+        return _fields(filled, header)
     except ArrowInvalid as error:
         _refuse_ragged(data, len(header), file)
         reason = str(error).splitlines()[0]
         raise InputError(f"the table cannot be read ({reason})", file=file, mend="Save it again as CSV.") from None
+
+
+def _fields(data: bytes, header: list[str]) -> pd.DataFrame:
+    """Read by pyarrow, which infers nothing here and refuses rows of another length than the header."""
+    from pyarrow import csv as arrow
+    from pyarrow import py_buffer, string
+
+    quoted = b'"' in data
+    convert = arrow.ConvertOptions(column_types=dict.fromkeys(header, string()), strings_can_be_null=False)
+    parse = arrow.ParseOptions(newlines_in_values=quoted, ignore_empty_lines=False)
+    block = len(data) + 1 if quoted else 1 << 20
+    # without threads: pyarrow's pool can abort a process that ends while it winds down
+    read = arrow.ReadOptions(use_threads=False, column_names=header, skip_rows=1, block_size=block)
+    table = arrow.read_csv(py_buffer(data), read_options=read, parse_options=parse, convert_options=convert)
     frame: pd.DataFrame = table.to_pandas(types_mapper={string(): pd.StringDtype("pyarrow")}.get)
     return frame
 
@@ -105,7 +114,7 @@ def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
             row=row,
             mend="Save the file as CSV in UTF-8.",
         ) from None
-    if b"\r\n" in data:
+    if b"\r" in data:
         data = data.replace(b"\r\n", b"\n")
     if b"\r" in data:
         data = data.replace(b"\r", b"\n")

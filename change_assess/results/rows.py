@@ -30,7 +30,7 @@ ALL_PAIRS_UP_TO = 50
 ROUNDING = 1e-15
 """Shares smaller than this are differences of equal numbers."""
 
-SIMULATED_NUMBERS = 800_000
+SIMULATED_NUMBERS = 400_000
 """Random numbers that one simulation may draw; the number of simulated samples follows, at least 400."""
 
 
