@@ -105,7 +105,8 @@ class TextTable:
     def refuse_repeats(self, name: str, mend: str) -> None:
         """Refuse a column in which a text stands twice."""
         texts = self.frame[name].str.strip()
-        if bool((texts.array[1:] > texts.array[:-1]).all()):  # in strict order: none can stand twice
+        before, after = texts.iloc[:-1].reset_index(drop=True), texts.iloc[1:].reset_index(drop=True)
+        if (after > before).all():  # in strict order: none can stand twice
             return
         for at in np.flatnonzero(np.asarray(texts.duplicated()))[:1]:
             first = int(np.flatnonzero(np.asarray(texts == texts.iloc[at]))[0])

@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 
 from change_assess import files, scenario
+from change_assess.interpreters import simulate_labels
 from change_assess.labels.reconcile import Reconciled, reconcile
 from change_assess.legend import ChangeClasses, Legend
 from change_assess.maps.grid import open_maps, whole_map
@@ -145,7 +146,7 @@ def _labelled_sample(folder: Path, maps: scenario.ScenarioMaps, paths: list[str]
     sizes = {stratum: min(SIZES.get(stratum, UNITS_PER_CHANGE), n) for stratum, n in units.items()}
     drawn = draw(raster, strata, sizes, seed=seed, maps=paths, dates=maps.dates, legend=maps.legend)
     drawn.save(folder / "sample")
-    returned = scenario.simulate_labels(drawn.sample, maps.truth, maps.legend, seed=seed)
+    returned = simulate_labels(drawn.sample, maps.truth, maps.legend, seed=seed)
     for labels in returned:
         name = f"labels_{labels['interpreter'].iloc[0]}.csv"
         files.write_text(folder / "labels" / name, labels.to_csv(index=False, lineterminator="\n"))

@@ -40,13 +40,21 @@ FLOORS = {
     "results": 4,
     "reporting": 5,
     "scenario": 6,
+    "interpreters": 6,
     "first_study": 6,
     "walkthrough": 6,
     "cli": 7,
 }
 """Floor of each room; a room imports only from floors below."""
 
-SIBLINGS = {("tables", "vectors"), ("samples", "tables"), ("tables", "csvfile"), ("walkthrough", "scenario")}
+SIBLINGS = {
+    ("tables", "vectors"),
+    ("samples", "tables"),
+    ("tables", "csvfile"),
+    ("walkthrough", "scenario"),
+    ("walkthrough", "interpreters"),
+    ("interpreters", "scenario"),
+}
 """The only imports between rooms of one floor, from the first to the second."""
 
 DOORS = {
@@ -61,7 +69,7 @@ DOORS = {
 }
 """The only modules that import each heavy or outward library."""
 
-MAP_WING = {"maps", "sample", "scenario", "walkthrough", "cli", "first_study"}
+MAP_WING = {"maps", "sample", "scenario", "interpreters", "walkthrough", "cli", "first_study"}
 """Rooms that touch pixels, themselves or through others."""
 
 

@@ -11,9 +11,10 @@ import pytest
 import rasterio
 from numpy.typing import NDArray
 
-from change_assess import scenario
+from change_assess import interpreters, scenario
 from change_assess.errors import FileError, InputError
-from change_assess.scenario import FOREST, LEGEND, ScenarioMaps, build_maps, simulate_labels, true_areas
+from change_assess.interpreters import SURENESS, simulate_labels
+from change_assess.scenario import FOREST, LEGEND, ScenarioMaps, build_maps, true_areas
 
 SIZE = 600
 
@@ -136,18 +137,18 @@ def test_labels_are_nearly_the_truth(maps: ScenarioMaps) -> None:
     assert table.columns.tolist() == ["unit", "interpreter", *columns, "sureness"]
     place = table["unit"].str[1:].astype(int).to_numpy()
     names = np.array(["", *LEGEND.names], dtype=object)
-    truth = names[scenario._codes_at(sample, list(maps.truth.values()))][place]
+    truth = names[interpreters._codes_at(sample, list(maps.truth.values()))][place]
     labels = table[columns].to_numpy()
     blank = (labels == "").any(axis=1)
     assert 0 < blank.mean() < 0.02
     assert 0.95 < (labels == truth).all(axis=1)[~blank].mean() < 0.999
-    assert set(table["sureness"]) == {*scenario.SURENESS, ""}
+    assert set(table["sureness"]) == {*SURENESS, ""}
 
 
 def test_errors_of_interpreters_make_no_change_where_there_is_none(maps: ScenarioMaps) -> None:
     """A unit without true change that is mislabelled gets the same wrong label at all dates."""
     sample = units(maps, 3000)
-    codes = scenario._codes_at(sample, list(maps.truth.values()))
+    codes = interpreters._codes_at(sample, list(maps.truth.values()))
     stable = set(sample["unit"][(codes == codes[:, :1]).all(axis=1)])
     table = pd.concat(simulate_labels(sample, maps.truth, seed=1))
     columns = [f"ref_{d}" for d in maps.dates]
