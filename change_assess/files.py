@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import os
+import re
 import tempfile
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -54,6 +55,11 @@ def write_text(path: str | Path, text: str) -> Path:
     with replacing(path) as temporary:
         temporary.write_bytes(text.encode("utf-8"))
     return Path(path)
+
+
+def slug(name: str) -> str:
+    """Make a name fit for a file: letters, digits, points, dashes and underscores."""
+    return re.sub(r"[^\w.-]+", "-", name)
 
 
 def write_together(outputs: dict[Path, str]) -> None:

@@ -236,6 +236,7 @@ OVERALL: dict[str, Measure] = {
 ON_REQUEST: dict[str, Measure] = {"kappa": kappa}
 BY_PAIR: dict[str, Measure] = {"joint_share": joint_share}
 
+AREAS = ("area_ha", "area_share")
 IN_HECTARES = frozenset({"area_ha", "map_area_ha", "map_bias_ha"})
 SHARES = frozenset({*BY_CLASS, *OVERALL, *BY_PAIR}) - IN_HECTARES
 """Measures that lie between 0 and 1."""

@@ -85,6 +85,7 @@ SCHEMA: dict[str, dict[str, str]] = {
         "level": "number",
         "interval": "text",
         "kappa": "flag",
+        "influence": "texts",
         "seed": "whole",
         "out": "path",
     },

@@ -107,6 +107,14 @@ def estimate(
         bool | None,
         typer.Option("--kappa/--no-kappa", help="Also give kappa.", rich_help_panel=o.DESIGN, show_default=False),
     ] = None,
+    influence: Annotated[
+        list[str] | None,
+        typer.Option(
+            "--influence",
+            help='MEASURE:CLASS, as in "area_ha:forest loss": which units and strata carry it; repeat.',
+            rich_help_panel=o.OUTPUT,
+        ),
+    ] = None,
     seed: o.Seed = None,
     study: o.Study = None,
     out: o.Out = None,
@@ -125,12 +133,15 @@ def estimate(
     result, inputs = _estimated(options, quiet=quiet or json)
     if study is not None:
         inputs["study"] = study
+    carried = [found for text in options.get("influence") or () for found in _influences(result, text)]
     if json:
         run.print_json(result.to_json(inputs))
     else:
-        terminal.show_result(where, result)
+        terminal.show_result(where, result, dict(carried))
     if options.get("out"):
         run.say_written(where, result.save(options["out"], inputs))
+        for name, found in carried:
+            _save_influence(Path(options["out"]), name, found)
 
 
 def _estimated(options: dict[str, Any], *, quiet: bool) -> tuple[Any, dict[str, Any]]:
@@ -170,6 +181,29 @@ def _estimated(options: dict[str, Any], *, quiet: bool) -> tuple[Any, dict[str, 
         **given,
     )
     return result, inputs
+
+
+def _influences(result: Any, text: str) -> list[tuple[str, Any]]:
+    """Influence on a measure of a class ("MEASURE:CLASS", or an overall measure) in every table that holds it."""
+    from change_assess.errors import InputError
+
+    measure, _, name = (p.strip() for p in text.partition(":"))
+    keys = [k for k, c in result.contrasts.items() if not name or name in c.classes]
+    if not keys:
+        raise InputError(f"no table holds the class '{name}'", value=text, mend="Write --influence MEASURE:CLASS.")
+    found = [(k, result.influence(measure, name, map=k.map, depth=k.depth, period=k.period)) for k in keys]
+    return [(" ".join(p for p in (measure, name, k.map, k.depth, k.period) if p), i) for k, i in found]
+
+
+def _save_influence(folder: Path, name: str, found: Any) -> None:
+    from change_assess.files import slug, write_text
+    from change_assess.reporting.figures import influence_bars
+
+    for kind, table in (("units", found.units), ("strata", found.strata)):
+        path = folder / f"influence-{kind}-{slug(name)}.csv"
+        write_text(path, table.to_csv(index=False, lineterminator="\n"))
+    unit = "hectares" if found.measure.endswith("_ha") else "share"
+    influence_bars(found.units, found.strata, folder / f"influence-{slug(name)}", unit=unit)
 
 
 def _sample(options: dict[str, Any], *, quiet: bool) -> tuple[Any, dict[str, Any]]:

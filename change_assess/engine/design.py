@@ -17,6 +17,9 @@ from scipy import sparse
 
 from change_assess.engine.cells import Cells, Floats, Ints
 
+_BLOCK_NUMBERS = 2_000_000
+"""Counts held at a time where many samples are looked at, to bound memory."""
+
 NEGLIGIBLE = 1e-13
 """Residuals below this share of the scores they come from are rounding, and are set to zero."""
 
@@ -165,6 +168,38 @@ class Design:
             squares = _centred_squares(stage.reduce(u), stage.count, stage.group, stage.size)
             np.add.at(parts.T, stage.stratum_of_group, (squares * stage.factor).T)
         return parts
+
+    def contributions(self, u: sparse.csr_array, cells: Cells) -> Floats:
+        """What one primary unit adds to the variance of one row of scores, shape (c,): by the cell it belongs to.
+
+        The variance is the sum over primary units. In two-stage designs a cluster's part holds its second stage.
+        """
+        first, *second = self._stages(cells)
+        parts = first.factor[first.group] * _centred(first.reduce(u), first.count, first.group, first.size)[0] ** 2
+        for stage in second:
+            parts = parts + stage.factor * _centred_squares(u, stage.count, stage.group, stage.size)[0]
+        return np.asarray(parts if cells.psu is None else parts[cells.psu])
+
+    def without_each(self, cells: Cells) -> Iterator[tuple[Ints, Floats]]:
+        """Counts of the sample without one primary unit, in blocks: cells, and counts of shape (block, c).
+
+        A block row holds the counts when a unit of that cell (in cluster designs, its whole cluster) is left out and
+        the rest of its stratum weighs accordingly more.
+        """
+        total = len(cells)
+        for start in range(0, total, step := max(1, _BLOCK_NUMBERS // total)):
+            block = np.arange(start, min(start + step, total))
+            counts = np.repeat(cells.count[None, :], len(block), axis=0)
+            if cells.psu is None:
+                counts[np.arange(len(block)), block] -= 1
+            else:
+                counts[cells.psu[None, :] == cells.psu[block][:, None]] = 0.0
+                m = self.primary_count(cells)[cells.stratum[block]]
+                with np.errstate(divide="ignore", invalid="ignore"):
+                    rest = np.where(m > 1, m / (m - 1), np.nan)
+                same = cells.stratum[None, :] == cells.stratum[block][:, None]
+                counts = np.where(same, counts * rest[:, None], counts)
+            yield block, counts
 
     def covariance(self, u: sparse.csr_array, v: sparse.csr_array, cells: Cells) -> Floats:
         """Covariance, shape (p, q), of the totals behind the score rows `u` and `v`."""

@@ -528,6 +528,48 @@ def _hectares(value: float) -> str:
 # --- matrix ----------------------------------------------------------------------------------------------------------
 
 
+def influence_bars(units: pd.DataFrame, strata: pd.DataFrame, path: str | Path, *, unit: str = "hectares") -> Figure:
+    """Draw how far the estimate moves without each of the most influential units, and each stratum's share of variance.
+
+    Parameters
+    ----------
+    units : DataFrame
+        ``unit, stratum, change_without``; the first ten are drawn.
+    strata : DataFrame
+        ``stratum, variance_share``; the ten largest are drawn.
+    path : path
+        Where to write; the suffix is replaced by ``.svg`` and ``.png``.
+    unit : str
+        Unit of the estimate.
+
+    Returns
+    -------
+    Figure
+    """
+    _need(units, ("unit", "stratum", "change_without"), "influential units")
+    _need(strata, ("stratum", "variance_share"), "strata")
+    top = units.head(10).iloc[::-1]
+    shares = strata.sort_values("variance_share", ascending=False, kind="stable").head(10).iloc[::-1]
+    names = [f"{u} ({s})" for u, s in zip(top["unit"], top["stratum"], strict=True)]
+    with _style():
+        sheet = Sheet(figsize=(9.5, 0.3 * max(len(top), len(shares)) + 1.4), layout="constrained")
+        left, right = sheet.subplots(1, 2)
+        left.barh(names, top["change_without"], color="#0072B2", height=0.65)
+        left.axvline(0, color=_INK, lw=0.8)
+        left.set_xlabel(f"change of the estimate without the unit ({unit})")
+        right.barh(shares["stratum"].astype(str), 100 * shares["variance_share"], color="#D55E00", height=0.65)
+        right.set_xlabel("share of the variance (per cent)")
+        left.set_title("Units (and their strata)")
+        right.set_title("Strata")
+        first, stratum = units.iloc[0], shares.iloc[-1]
+        alt = (
+            f"Two bar charts. Without unit {first['unit']} of stratum {first['stratum']} the estimate would change by "
+            f"{first['change_without']:,.4g} {unit}, the most of all units. Stratum {stratum['stratum']} carries "
+            f"{stratum['variance_share']:.0%} of the variance, the most of all strata."
+        )
+        return _save(sheet, path, alt)
+
+
 def matrix_heat(matrix: pd.DataFrame, path: str | Path) -> Figure:
     """Draw the joint map × reference matrix; rows are the map, columns the reference.
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
 import pandas as pd
@@ -13,6 +13,7 @@ from rich.text import Text
 
 from change_assess.errors import Notice
 from change_assess.reporting import texts
+from change_assess.results.influence import Influence
 from change_assess.results.result import Key, Result, View
 
 if TYPE_CHECKING:
@@ -26,7 +27,7 @@ SHOWN = ("area_ha", "users_accuracy", "producers_accuracy", "f1", "overall_accur
 MARKS = {"exact": "ᵉ", "simulated": "ˢ", "zero-count": "ᶻ", "t": "ᵗ"}
 
 
-def show_result(console: Console, result: Result) -> None:
+def show_result(console: Console, result: Result, influences: Mapping[str, Influence] | None = None) -> None:
     """Print what was found: the sample, areas and accuracies at each depth, matrices, what must be known."""
     _show_sample(console, result)
     marks: set[str] = set()
@@ -43,6 +44,8 @@ def show_result(console: Console, result: Result) -> None:
                 _show_matrices(console, View(contrast, result.level), key)
         marks |= set(rows.loc[rows["measure"].isin(SHOWN), "interval"]) & set(MARKS)
     _show_worst_case(console, result)
+    for name, influence in (influences or {}).items():
+        _show_influence(console, name, influence)
     console.print()
     for mark in sorted(marks):
         console.print(f"{MARKS[mark]} {texts.INTERVALS[mark]}.", style="dim")
@@ -175,6 +178,50 @@ def _show_worst_case(console: Console, result: Result) -> None:
         table.add_row(row["class"], row["period"], row["domain"], rounded(row["lower"], 1), rounded(row["upper"], 1))
     title = "Worst case for what has no label, hectares: none, or all, of it is of the class; sampling error included"
     _show(console, title, table)
+
+
+def _show_influence(console: Console, name: str, influence: Influence) -> None:
+    """The five most influential units, and what the largest strata carry and could hide."""
+    step = _step({"se": influence.se, "upper": math.nan, "lower": math.nan})
+    table = _new_table(["unit", "stratum", "map", "reference", "of variance", "estimate without it"])
+    for row in _records(influence.units.head(5)):
+        table.add_row(
+            row["unit"],
+            row["stratum"],
+            row["map"],
+            row["reference"],
+            _percent(row["variance_share"]),
+            rounded(row["without"], step),
+        )
+    _show(
+        console, f"Units that carry {name} ({rounded(influence.value, step)}, SE {rounded(influence.se, step)})", table
+    )
+    if "hidden_ha" not in influence.strata:
+        return
+    table = _new_table(
+        [
+            "stratum",
+            "n",
+            "seen",
+            "of variance",
+            "one unit, ha",
+            "could hide, ha",
+            "more to double",
+            "more to lose the map",
+        ]
+    )
+    for row in _records(influence.strata.sort_values("area_ha", ascending=False, kind="stable").head(6)):
+        whole = [rounded(row[c], 1) for c in ("omissions_to_double", "omissions_to_lose_map")]
+        table.add_row(
+            row["stratum"],
+            f"{row['n']:,}",
+            rounded(row["seen"], 1),
+            _percent(row["variance_share"]),
+            rounded(row["one_unit_ha"], 0.1),
+            rounded(row["hidden_ha"], 1),
+            *whole,
+        )
+    _show(console, f"Largest strata and what they could hide (one-sided bound at {influence.level:.0%})", table)
 
 
 # -- numbers ----------------------------------------------------------------------------------------------

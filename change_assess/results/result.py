@@ -4,8 +4,7 @@ from __future__ import annotations
 
 import json
 import platform
-import re
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
@@ -20,6 +19,7 @@ from change_assess.engine.estimate import Estimate, Known
 from change_assess.engine.linearise import Linearised, Survey
 from change_assess.errors import InputError, Notice, nearest
 from change_assess.measures import BY_CLASS, ON_REQUEST, OVERALL, Contrast, Measure, Totals, joint_share, linearise
+from change_assess.results.influence import Influence, influence
 from change_assess.samples import Sample
 
 
@@ -166,10 +166,10 @@ class Result:
         """Choose one contrast by map, depth and period; what is not named must be unambiguous."""
         keys = self._matching(map=map, depth=depth, period=period)
         if len(keys) != 1:
-            options = "; ".join(
-                f"map={k.map!r}, depth={k.depth!r}, period={k.period!r}" for k in (keys or self.contrasts)
+            raise InputError(
+                f"{'several tables fit' if keys else 'no table fits'}",
+                mend=f"Choose one: {_ways(keys or self.contrasts)}.",
             )
-            raise InputError(f"{'several tables fit' if keys else 'no table fits'}", mend=f"Choose one: {options}.")
         return View(self.contrasts[keys[0]], self.level)
 
     def _matching(self, **wanted: str | None) -> list[Key]:
@@ -182,10 +182,8 @@ class Result:
             every = list(dict.fromkeys(c for x in self.contrasts.values() for c in x.classes))
             raise InputError(f"there is no class '{name}'", value=name, mend=nearest(name, every).strip())
         if len(keys) > 1:
-            ways = "; ".join(f"map={k.map!r}, depth={k.depth!r}, period={k.period!r}" for k in keys)
-            raise InputError(
-                f"'{name}' stands in {len(keys)} tables", value=name, mend=f"Use result.select(...) with: {ways}."
-            )
+            mend = f"Use result.select(...) with: {_ways(keys)}."
+            raise InputError(f"'{name}' stands in {len(keys)} tables", value=name, mend=mend)
         return View(self.contrasts[keys[0]], self.level)[name]
 
     def __getattr__(self, measure: str) -> Estimate:
@@ -197,6 +195,31 @@ class Result:
     def measure(self, function: Callable[[Totals], Any], **which: str) -> Estimate | dict[str, Estimate]:
         """Evaluate your own function of `Totals`; `which` chooses the table as in `select`."""
         return self.select(**which).measure(function)
+
+    def influence(
+        self,
+        measure: str,
+        class_name: str = "",
+        *,
+        map: str | None = None,
+        depth: str | None = None,
+        period: str | None = None,
+    ) -> Influence:
+        """Units and strata that carry an estimate; `map`, `depth` and `period` choose the table as in `select`."""
+        measures = BY_CLASS if class_name else OVERALL
+        if measure not in measures:
+            raise InputError(f"there is no measure '{measure}'", value=measure, mend=nearest(measure, measures).strip())
+        keys = self._matching(map=map, depth=depth, period=period)
+        keys = [k for k in keys if not class_name or class_name in self.contrasts[k].classes]
+        if len(keys) != 1:
+            raise InputError(
+                f"{len(keys)} tables fit", value=class_name, mend=f"Choose one: {_ways(keys or self.contrasts)}."
+            )
+        key = keys[0]
+        mapped = self.table[(self.table["measure"] == "map_area_ha") & (self.table["class"] == class_name)]
+        mapped = mapped[(mapped[["map", "depth", "period"]] == [key.map, key.depth, key.period]).all(axis=1)]
+        known = float(mapped["estimate"].iloc[0]) if len(mapped) else None
+        return influence(self.contrasts[key], self.sample, measure, class_name, mapped_ha=known, level=self.level)
 
     # -- writing ---------------------------------------------------------------------------------------------
 
@@ -243,12 +266,16 @@ class Result:
         for key, contrast in self.contrasts.items():
             if key.map:
                 view = View(contrast, self.level)
-                name = re.sub(r"[^\w.-]+", "-", "-".join(p for p in (key.map, key.depth, key.period) if p))
+                name = files.slug("-".join(p for p in (key.map, key.depth, key.period) if p))
                 for kind, matrix in (("sample-counts", view.counts()), ("area-shares", view.area_shares())):
                     matrix.index.name = "map \\ reference"
                     texts[folder / f"matrix-{kind}-{name}.csv"] = matrix.to_csv(lineterminator="\n")
         files.write_together(texts)
         return list(texts)
+
+
+def _ways(keys: Iterable[Key]) -> str:
+    return "; ".join(f"map={k.map!r}, depth={k.depth!r}, period={k.period!r}" for k in keys)
 
 
 def _plain_number(value: Any) -> Any:
