@@ -1,4 +1,4 @@
-"""Area of land change, with intervals that hold, and map accuracy, from a probability sample.
+"""Area of land change with confidence intervals, and map accuracy, from a probability sample.
 
 The steps in order, each a function with the same name as its command:
 

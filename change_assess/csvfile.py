@@ -102,6 +102,8 @@ def _decoded(path: Path) -> tuple[bytes, tuple[Notice, ...]]:
         notices.append(Notice("byte-order-mark", {"file": path.name, "encoding": "UTF-8"}))
     if not data or data.isspace():
         raise InputError("the file is empty", file=path.name, mend="Check that the right file was named.")
+    if data.startswith(b"PK\x03\x04"):
+        raise InputError("this is a workbook or an archive", file=path.name, mend="Save the table as CSV in UTF-8.")
     if b"\0" in data:
         raise InputError("this is not a text table", file=path.name, mend="Save it as CSV in UTF-8.")
     try:

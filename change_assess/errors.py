@@ -41,7 +41,14 @@ class InputError(ChangeAssessError, ValueError):
         value: object = None,
         mend: str = "",
     ) -> None:
-        self.message, self.file, self.row, self.column, self.value, self.mend = message, file, row, column, value, mend
+        self.message, self.file, self.row, self.column, self.value, self.mend = (
+            message,
+            file,
+            row,
+            column,
+            value,
+            mend.strip(),
+        )
         super().__init__(message)
 
     def __str__(self) -> str:

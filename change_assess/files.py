@@ -38,6 +38,8 @@ def replacing(path: str | Path) -> Iterator[Path]:
             os.fsync(written.fileno())
         os.chmod(temporary, 0o666 & ~_umask())
         os.replace(temporary, target)
+    except FileError:
+        raise
     except OSError as error:
         raise FileError(f"{target} cannot be written: {error.strerror or error}.") from error
     finally:
@@ -59,7 +61,7 @@ def write_text(path: str | Path, text: str) -> Path:
 
 def slug(name: str) -> str:
     """Make a name fit for a file: letters, digits, points, dashes and underscores."""
-    return re.sub(r"[^\w.-]+", "-", name)
+    return re.sub(r"[^\w.-]+", "-", name)[:120]
 
 
 def write_together(outputs: dict[Path, str]) -> None:

@@ -22,7 +22,10 @@ ARROW = ">"
 ANY = "*"
 """In a recipe: every class that the other side of the recipe does not name."""
 
-NO_CHANGE, CHANGE, OTHER_CHANGE = "no change", "change", "other change"
+NO_CHANGE, CHANGE = "no change", "change"
+OTHER_NO_CHANGE, OTHER_CHANGE = "other no change", "other change"
+RESERVED = {NO_CHANGE, CHANGE, OTHER_NO_CHANGE, OTHER_CHANGE}
+"""Names of what no recipe matches; persistence is *other no change* where a recipe names some of it."""
 
 
 def pair_name(first: str, second: str) -> str:
@@ -175,6 +178,8 @@ class ChangeClasses:
         """Take recipes as they are or as texts such as ``"forest loss=forest>*"``."""
         if isinstance(recipes, ChangeClasses):
             return recipes
+        if isinstance(recipes, str):
+            recipes = [recipes]
         return cls(tuple(r if isinstance(r, ChangeClass) else ChangeClass.parse(r) for r in recipes))
 
     def table(self, legend: Legend) -> tuple[list[str], NDArray[np.intp]]:
@@ -183,21 +188,31 @@ class ChangeClasses:
         Returns
         -------
         names : list of str
-            Change-class names in order of their recipes, then *no change* and *other change*.
+            Change-class names in order of their recipes, then *no change* (*other no change* where a recipe names
+            some persistence) and *other change*.
         table : ndarray of int, shape (K, K)
             Position in `names` of the transition from class i (row) to class j (column).
 
         Raises
         ------
         InputError
-            For a recipe that names an unknown class.
+            For a recipe that names an unknown class, or is called like what no recipe matches.
         """
-        names = list(dict.fromkeys([r.name for r in self.recipes] + [NO_CHANGE, OTHER_CHANGE]))
+        for recipe in self.recipes:
+            if recipe.name.casefold() in RESERVED:
+                raise InputError(
+                    f"a change class cannot be called '{recipe.name}': that is what no recipe matches",
+                    value=recipe.name,
+                    mend="Choose another name.",
+                )
+        sides = [self._sides(recipe, legend) for recipe in self.recipes]
+        persistence = any(set(before) & set(after) for before, after in sides)
+        rest = [OTHER_NO_CHANGE if persistence else NO_CHANGE, OTHER_CHANGE]
+        names = list(dict.fromkeys([r.name for r in self.recipes] + rest))
         size = len(legend.classes)
         table = np.full((size, size), names.index(OTHER_CHANGE), dtype=np.intp)
-        np.fill_diagonal(table, names.index(NO_CHANGE))
-        for recipe in reversed(self.recipes):
-            before, after = self._sides(recipe, legend)
+        np.fill_diagonal(table, names.index(rest[0]))
+        for recipe, (before, after) in zip(reversed(self.recipes), reversed(sides), strict=True):
             table[np.ix_(before, after)] = names.index(recipe.name)
         return names, table
 

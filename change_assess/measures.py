@@ -2,7 +2,7 @@
 
 The functions run unchanged on `Linearised` totals (giving standard errors) and on plain arrays with leading
 replicate axes (giving simulations). Rows are the map, columns the reference. A new measure is one more function;
-`MEASURES` only says which ones `estimate` prints.
+`BY_CLASS`, `OVERALL` and `BY_PAIR` only say which ones `estimate` prints.
 """
 
 from __future__ import annotations
@@ -54,9 +54,14 @@ class Totals:
     column: Ints
 
     @property
+    def whole(self) -> Values:
+        """Area that shares are shares of: the estimated total, or the known area under expansion; shape (...)."""
+        return self.known_area_ha if self.expansion else self.everything
+
+    @property
     def all(self) -> Values:
-        """Area of everything with a class axis of length one, to divide by."""
-        return self.everything[..., None]
+        """`whole` with a class axis of length one."""
+        return self.known_area_ha if self.expansion else self.everything[..., None]
 
     @property
     def classes(self) -> int:
@@ -94,17 +99,17 @@ def area_share(t: Totals) -> Values:
 
     Ratio of totals (combined ratio estimator: Cochran 1977, section 6.11; Olofsson et al. 2014, RSE 148, eq. 9).
     """
-    return t.reference / t.known_area_ha if t.expansion else t.reference / t.all
+    return t.reference / t.all
 
 
 def area_ha(t: Totals) -> Values:
-    """Area of each class, in hectares: share times known area (Olofsson et al. 2014, eq. 11); shape (..., K)."""
+    """Area of each class, in hectares: share times known area (Olofsson et al. 2014); shape (..., K)."""
     return area_share(t) * t.known_area_ha
 
 
 def map_share(t: Totals) -> Values:
     """Share of the area that the map puts in each class, as the sample sees it; shape (..., K)."""
-    return t.mapped / t.known_area_ha if t.expansion else t.mapped / t.all
+    return t.mapped / t.all
 
 
 def map_area_ha(t: Totals) -> Values:
@@ -119,7 +124,7 @@ def map_bias_ha(t: Totals) -> Values:
 
 def joint_share(t: Totals) -> Values:
     """Share of the area in each observed pair (map class, reference class); shape (..., P)."""
-    return t.joint / t.known_area_ha if t.expansion else t.joint / t.all
+    return t.joint / t.all
 
 
 # -- accuracy ---------------------------------------------------------------------------------------------
@@ -127,7 +132,7 @@ def joint_share(t: Totals) -> Values:
 
 def overall_accuracy(t: Totals) -> Values:
     """Share of the area where map and reference agree (Olofsson et al. 2014, eq. 1); shape (...)."""
-    return t.both.sum(axis=-1) / t.everything
+    return t.both.sum(axis=-1) / t.whole
 
 
 def users_accuracy(t: Totals) -> Values:
@@ -180,8 +185,8 @@ def shift_by_class(t: Totals) -> Values:
 
 def quantity_disagreement(t: Totals) -> Values:
     """Disagreement due to different amounts of the classes (Pontius & Millones 2011, eq. 3); shape (...)."""
-    unmapped = 1 - t.mapped.sum(axis=-1) / t.everything  # what the map leaves empty is one more class, nowhere right
-    return (quantity_by_class(t).sum(axis=-1) + unmapped) / 2
+    # what the map leaves empty is one more class, nowhere right
+    return (quantity_by_class(t).sum(axis=-1) + unmapped_share(t)) / 2
 
 
 def allocation_disagreement(t: Totals) -> Values:
@@ -199,13 +204,18 @@ def shift(t: Totals) -> Values:
     return shift_by_class(t).sum(axis=-1) / 2
 
 
+def unmapped_share(t: Totals) -> Values:
+    """Share of the area that the map leaves empty; printed where there is any; shape (...)."""
+    return (t.everything - t.mapped.sum(axis=-1)) / t.whole
+
+
 def kappa(t: Totals) -> Values:
     """Cohen's kappa from area shares (Cohen 1960), on request only; shape (...).
 
     Its use as an index of map accuracy is discouraged: Pontius & Millones 2011; Foody 2020, RSE 239, 111630.
     """
     agreement = overall_accuracy(t)
-    chance = (t.mapped * t.reference).sum(axis=-1) / (t.everything * t.everything)
+    chance = (t.mapped * t.reference).sum(axis=-1) / (t.whole * t.whole)
     return (agreement - chance) / (1 - chance)
 
 
@@ -238,8 +248,6 @@ BY_PAIR: dict[str, Measure] = {"joint_share": joint_share}
 
 AREAS = ("area_ha", "area_share")
 IN_HECTARES = frozenset({"area_ha", "map_area_ha", "map_bias_ha"})
-SHARES = frozenset({*BY_CLASS, *OVERALL, *BY_PAIR}) - IN_HECTARES
-"""Measures that lie between 0 and 1."""
 
 
 # -- totals of one map against one reference ---------------------------------------------------------------

@@ -51,7 +51,9 @@ class Sample:
     design : str
         simple, stratified, cluster or two-stage.
     sample_id : str
-        Digest of units and strata; estimates from one sample share it.
+        Digest of the units, their strata, clusters and coordinates; estimates from one sample share it.
+    order : ndarray of int, shape (n,), or None
+        Rows in the order of unit ids, if they do not stand in it.
     rows : str
         For a sample made from a matrix of counts: what its rows are.
     """
@@ -66,6 +68,7 @@ class Sample:
     crossing: TextTable | None
     design: str
     sample_id: str
+    order: NDArray[np.intp] | None = None
     notices: tuple[Notice, ...] = ()
     rows: str = ""
 
@@ -128,6 +131,7 @@ def read_sample(
     cluster_frame, cluster = _read_clusters(clusters, units, frame, stratum, columns)
     kind = _design_kind(design, frame, cluster_frame, cluster)
     _check_population(frame, stratum, strata_file, cluster_frame)
+    order = _order_of_units(units)
     return Sample(
         units=units,
         strata=frame,
@@ -138,20 +142,30 @@ def read_sample(
         cluster=cluster,
         crossing=cross,
         design=kind,
-        sample_id=_sample_id(units, frame),
+        sample_id=_sample_id(units, order),
+        order=order,
         notices=(*units.notices, *notices, *(cross.notices if cross else ())),
     )
 
 
-PLACE_COLUMNS = ("unit", "stratum", "cluster", "area_ha", "x", "y", "longitude", "latitude")
+PLACE_COLUMNS = ("unit", "stratum", "cluster", "x", "y", "longitude", "latitude")
 """Columns that tell one sample from another; labels may be added to a sample without making it another one."""
 
 
-def _sample_id(units: TextTable, strata: pd.DataFrame) -> str:
-    digest = hashlib.sha256(strata.to_csv().encode())
+def _order_of_units(units: TextTable) -> NDArray[np.intp] | None:
+    """Rows in the order of their unit ids; None if they stand in it already."""
+    ids = units.frame["unit"]
+    before, after = ids.iloc[:-1].reset_index(drop=True), ids.iloc[1:].reset_index(drop=True)
+    return None if (after > before).all() else np.asarray(ids.argsort(kind="stable"), dtype=np.intp)
+
+
+def _sample_id(units: TextTable, order: NDArray[np.intp] | None) -> str:
+    """Digest of the units and where they lie, whatever the order of the rows."""
+    digest = hashlib.sha256()
     for name in PLACE_COLUMNS:
         if name in units.frame.columns:
-            digest.update(name.encode() + b"\0" + _column_bytes(units.frame[name]))
+            column = units.frame[name] if order is None else units.frame[name].iloc[order]
+            digest.update(name.encode() + b"\0" + _column_bytes(column))
     return digest.hexdigest()[:16]
 
 
@@ -166,9 +180,7 @@ def _column_bytes(column: pd.Series[Any]) -> bytes:
 
 
 def _check_unit_ids(units: TextTable) -> None:
-    blank = np.asarray(units.frame["unit"].str.strip() == "")
-    for at in np.flatnonzero(blank)[:1]:
-        raise InputError("a unit has no id", file=units.file, row=units.row(at), column="unit", mend="Give it one.")
+    units.refuse_blanks("unit", "a unit has no id", "Give it one.")
     units.refuse_repeats("unit", "Every unit needs an id of its own.")
 
 
@@ -190,6 +202,7 @@ def _one_stratum(cross: TextTable | None) -> pd.DataFrame:
 
 def _strata_frame(table: TextTable) -> pd.DataFrame:
     table.refuse_repeats("stratum", "Give each stratum one row.")
+    table.refuse_blanks("stratum", "a stratum has no name", "Name it.")
     frame = pd.DataFrame({"stratum": table.frame["stratum"].astype(str).str.strip()})
     known = "units" in table.frame.columns
     frame["units"] = table.numbers("units", whole=True) if known else np.nan
@@ -221,6 +234,13 @@ def _read_clusters(
     columns: Mapping[str, str] | None,
 ) -> tuple[pd.DataFrame | None, NDArray[np.intp] | None]:
     if source is None:
+        if "cluster" in units.frame.columns:
+            raise InputError(
+                "the sample has a column 'cluster' but there is no table of the selected clusters",
+                file=units.file,
+                column="cluster",
+                mend="Name the table with --clusters; or rename the column, if units were not drawn in clusters.",
+            )
         return None, None
     units.require("cluster")
     table = read_table(source, "clusters table", required=["stratum", "cluster", "units"], columns=columns)
@@ -278,6 +298,7 @@ def _check_clusters(
             "use one stratum, and the strata as post-strata.",
         )
     seen = np.bincount(cluster, minlength=len(frame))
+    _check_cluster_sizes(table, frame, strata)
     for at in np.flatnonzero(seen > frame["units"].to_numpy())[:1]:
         raise InputError(
             f"the cluster holds {frame['units'].iloc[at]:g} units, the sample has {seen[at]} of it",
@@ -286,6 +307,15 @@ def _check_clusters(
             column="units",
             mend="Correct the size of the cluster.",
         )
+
+
+def _check_cluster_sizes(table: TextTable, frame: pd.DataFrame, strata: pd.DataFrame) -> None:
+    """Clusters of a stratum cannot hold more units than the stratum."""
+    held = np.bincount(frame["stratum"], frame["units"], minlength=len(strata))
+    for at in np.flatnonzero(held > strata["units"].to_numpy(float))[:1]:
+        row = int(np.flatnonzero(frame["stratum"].to_numpy() == at)[0])
+        what = f"the clusters of stratum '{strata['stratum'].iloc[at]}' hold {held[at]:g} units, the stratum "
+        table.refuse_word_at("units", row, what + f"{strata['units'].iloc[at]:g}", "Correct one of the tables.")
 
 
 def _design_kind(
@@ -333,6 +363,10 @@ def _check_population(
             )
 
 
+MOST_UNITS = 20_000_000
+"""More units than any sample has: a matrix that counts more holds pixels."""
+
+
 def read_matrix(matrix: Table, strata: Table, *, rows: str, columns: Mapping[str, str] | None = None) -> Sample:
     """Make a sample from a matrix of sample counts: rows are map classes, columns reference classes.
 
@@ -360,6 +394,15 @@ def read_matrix(matrix: Table, strata: Table, *, rows: str, columns: Mapping[str
         )
     table = read_table(matrix, "matrix")
     names = list(table.frame.columns)
+    if len(names) < 2:
+        raise InputError(
+            "the matrix has no column of counts", file=table.file, mend="Give one column a reference class."
+        )
+    for name in (*table.frame[names[0]], *names[1:]):
+        if str(name).strip().casefold() in ("total", "totals", "sum"):
+            raise InputError(
+                f"'{name}' looks like a sum", file=table.file, value=name, mend="Leave sums out of the matrix."
+            )
     classes = table.frame[names[0]].astype(str).str.strip()
     table.refuse_repeats(names[0], "Give each map class one row.")
     counts = np.stack([table.numbers(c, whole=True, positive=False) for c in names[1:]], axis=1)
@@ -367,6 +410,10 @@ def read_matrix(matrix: Table, strata: Table, *, rows: str, columns: Mapping[str
         row, column = np.argwhere(counts < 0)[0]
         raise InputError(
             "a count is negative", file=table.file, row=table.row(row), column=names[1 + column], mend="Correct it."
+        )
+    if counts.sum() > MOST_UNITS:
+        raise InputError(
+            f"the matrix counts {counts.sum():,.0f} units", file=table.file, mend="Give sample counts, not pixels."
         )
     i, j = (np.repeat(a.ravel(), counts.astype(int).ravel()) for a in np.indices(counts.shape))
     map_label, reference = classes.to_numpy()[i], np.array(names[1:], dtype=object)[j]

@@ -144,7 +144,7 @@ def _check_format(number: object, file: str) -> None:
         raise InputError(
             "the study file does not say its format", file=file, mend=f"Add 'format = {FORMAT}' at the top."
         )
-    if not isinstance(number, int) or number < 1:
+    if not isinstance(number, int) or isinstance(number, bool) or number < 1:
         raise InputError(f"'{number}' is not a format", file=file, value=number, mend=f"Write 'format = {FORMAT}'.")
     if number > FORMAT:
         raise InputError(

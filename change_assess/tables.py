@@ -40,7 +40,9 @@ ESTIMATE_COLUMNS = [
     "interval",
     "n",
 ]
-KEY_COLUMNS = ESTIMATE_COLUMNS[:8]
+LARGEST = 1e15
+"""Above this, counts are no longer exact in double precision, and areas are larger than the Earth."""
+
 LOOKS_MISSING = {"na", "n/a", "nan", "none", "null", "<null>", "<na>", "-", "?"}
 
 
@@ -82,6 +84,7 @@ class TextTable:
         wrong = (values <= 0) if positive else np.zeros(len(values), bool)
         if wrong.any():
             self._refuse(name, wrong, "must be greater than zero", "Give its true size, or leave the row out.")
+        self._refuse(name, np.abs(values) > LARGEST, "is too large for a count or an area", "Correct it.")
         if whole:
             self._refuse(name, values != np.round(values), "must be a whole number", "Give a count.")
         return values
@@ -101,6 +104,11 @@ class TextTable:
         """Refuse a text of a column, naming the first row that holds it."""
         at = int(np.flatnonzero(np.asarray(self.frame[name].str.strip() == word))[0])
         raise InputError(what, file=self.file, row=self.row(at), column=name, value=word, mend=mend)
+
+    def refuse_blanks(self, name: str, what: str, mend: str) -> None:
+        """Refuse a column in which nothing stands in some row."""
+        for at in np.flatnonzero(np.asarray(self.frame[name].str.strip() == ""))[:1]:
+            raise InputError(what, file=self.file, row=self.row(at), column=name, mend=mend)
 
     def refuse_repeats(self, name: str, mend: str) -> None:
         """Refuse a column in which a text stands twice."""
@@ -296,7 +304,11 @@ def label_codes(table: TextTable, column: str, legend: Legend) -> NDArray[np.int
         position = legend.index(word) if word else None
         if word and position is None:
             known = [*legend.names, *map(str, legend.codes)]
-            mend = f"Use a name or code of the legend.{nearest(word, known)}"
+            near = (
+                nearest(word, known)
+                or f" It holds: {', '.join(legend.names[:8])}{', …' if len(legend.names) > 8 else ''}."
+            )
+            mend = f"Use a name or code of the legend.{near}"
             table.refuse_word(column, word, f"the label '{word}' is not in the legend", mend)
         positions[i] = -1 if position is None else position
     return positions[codes]

@@ -30,9 +30,9 @@ RECIPES = (
     "forest loss=forest>*",
     "forest gain=*>forest",
 )
-"""Strata and change classes of the demo; what none matches is *no change* or *other change*."""
+"""Strata and change classes of the demo; what none matches is *other no change* or *other change*."""
 
-SIZES = {"stable forest": 700, "no change": 350}
+SIZES = {"stable forest": 700, "other no change": 350}
 """Units drawn from the large strata."""
 
 UNITS_PER_CHANGE = 110

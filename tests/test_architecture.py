@@ -337,27 +337,27 @@ def _facts(given: ast.expr, function: ast.FunctionDef) -> frozenset[str]:
 
 def placeholders(code: str) -> dict[str, str]:
     """Facts that the wording of a code asks for, and how each is formatted."""
-    return {name: spec or "" for _, name, spec, _ in string.Formatter().parse(texts._NOTICES[code]) if name}
+    return {name: spec or "" for _, name, spec, _ in string.Formatter().parse(texts.NOTICES[code]) if name}
 
 
 def test_every_notice_has_a_wording_and_every_wording_a_notice():
     """No code is without words, no words without a code."""
     said = list(notices())
     assert len(said) >= 20
-    met = {code for s in said for code in texts.known_codes() if re.fullmatch(s.pattern, code)}
-    wordless = [s for s in said if not any(re.fullmatch(s.pattern, code) for code in texts.known_codes())]
+    met = {code for s in said for code in set(texts.NOTICES) if re.fullmatch(s.pattern, code)}
+    wordless = [s for s in said if not any(re.fullmatch(s.pattern, code) for code in set(texts.NOTICES))]
     assert not wordless
-    assert met == texts.known_codes()
+    assert met == set(texts.NOTICES)
 
 
 def test_notices_bring_the_facts_that_their_words_ask_for():
     """Each placeholder of a wording is a fact of the notice where it is made."""
     for said in notices():
-        for code in (c for c in texts.known_codes() if re.fullmatch(said.pattern, c)):
+        for code in (c for c in set(texts.NOTICES) if re.fullmatch(said.pattern, c)):
             assert set(placeholders(code)) <= said.facts, (said.place, code)
 
 
-@pytest.mark.parametrize("code", sorted(texts.known_codes()))
+@pytest.mark.parametrize("code", sorted(set(texts.NOTICES)))
 def test_notices_become_sentences(code):
     """With its facts a notice reads as a sentence, lists included."""
     facts = {name: 1234.5 if spec else ["a", "b"] for name, spec in placeholders(code).items()}

@@ -163,7 +163,7 @@ BAD_SAMPLES = {
     "binary": (b"\x89PNG\r\n\x1a\n\x00\x00\x00\x0dIHDR", "not a text table", None, None, None),
     "zip archive, as of a spreadsheet": (
         b"PK\x03\x04\x14\x00\x06\x00\x08\x00\x00\x00!\x00",
-        "not a text table",
+        "a workbook or an archive",
         None,
         None,
         None,

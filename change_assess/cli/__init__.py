@@ -20,7 +20,7 @@ app = typer.Typer(
     no_args_is_help=True,
     pretty_exceptions_enable=False,
     rich_markup_mode=None,
-    help="Area of land change, with intervals that hold, and map accuracy, from a probability sample.",
+    help="Area of land change with confidence intervals, and map accuracy, from a probability sample.",
 )
 for command in (demo, start, tally, stratify, draw, reconcile, estimate):
     app.command()(command)

@@ -243,7 +243,7 @@ def _from_rasters(options: dict[str, Any], columns: dict[str, str], *, quiet: bo
     units = read_table(options["sample"], "sample", columns=columns)
     with run.progress("Counting map areas", quiet=quiet) as progress:
         counted = tally(options["raster"], dates=labels, legend=options.get("legend"), progress=progress)
-    if "stratum" not in units.frame.columns:
+    if "stratum" not in units.frame.columns or options.get("strata"):
         return counted.crossing(), None
     names = units.words("stratum")[1]
     return counted.crossing(), strata_of_tally(counted, names, options.get("change_class") or ())

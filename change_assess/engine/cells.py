@@ -6,9 +6,7 @@ computes needs more, so its cost does not grow with the number of units; `cell_o
 
 from __future__ import annotations
 
-import hashlib
 from dataclasses import dataclass, replace
-from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -38,6 +36,8 @@ class Cells:
         Cell of each unit of the sample table; -1 for units that take no part.
     sample_id : str
         The same for all cells made from one sample.
+    order : ndarray of int, shape (n,), optional
+        Rows of the sample table in the order of their unit ids; None if they stand in it already.
     """
 
     stratum: Ints
@@ -47,6 +47,7 @@ class Cells:
     psu: Ints | None = None
     cell_of_unit: Ints | None = None
     sample_id: str = ""
+    order: Ints | None = None
 
     @classmethod
     def from_units(
@@ -58,6 +59,7 @@ class Cells:
         psu: Ints | None = None,
         use: NDArray[np.bool_] | None = None,
         sample_id: str = "",
+        order: Ints | None = None,
         compress: bool = True,
     ) -> Cells:
         """Compress units, one row each; `use` marks those that take part. `compress=False` keeps one cell a unit."""
@@ -77,29 +79,20 @@ class Cells:
             psu=None if psu is None else psu[first],
             cell_of_unit=cell_of_unit,
             sample_id=sample_id,
+            order=order,
         )
 
     def with_count(self, count: Floats) -> Cells:
         """Return the same cells with other counts, shape (..., c)."""
         return replace(self, count=np.asarray(count, float))
 
-    def of_units(self, per_cell: Floats) -> Floats:
-        """Spread values of cells, shape (..., c), over the units of the sample table; NaN where a unit has no part."""
-        if self.cell_of_unit is None:
-            raise ValueError("these cells were not made from units")
-        padded = np.concatenate([per_cell, np.full((*per_cell.shape[:-1], 1), np.nan)], axis=-1)
-        return padded[..., self.cell_of_unit]
+    @property
+    def cell_by_unit_id(self) -> Ints | None:
+        """Cell of each unit, in the order of unit ids: the same for every reading of one sample."""
+        return self.cell_of_unit if self.cell_of_unit is None or self.order is None else self.cell_of_unit[self.order]
 
     def __len__(self) -> int:
         return len(self.stratum)
-
-    @cached_property
-    def fingerprint(self) -> str:
-        """Digest of everything that distinguishes one set of cells from another."""
-        digest = hashlib.sha256(self.sample_id.encode())
-        for part in (self.stratum, self.labels, self.size_ha, self.count, self.psu, self.cell_of_unit):
-            digest.update(b"-" if part is None else np.ascontiguousarray(part).tobytes())
-        return digest.hexdigest()
 
 
 def _group_rows(stratum: Ints, labels: Ints, size_ha: Floats, psu: Ints | None, taken: Ints) -> Ints:

@@ -164,7 +164,7 @@ class Design:
         NaN in strata with a single primary unit of several.
         """
         parts = np.zeros((u.shape[0], len(self.N)))
-        for stage in self._stages(cells):
+        for stage in self.stages(cells):
             squares = _centred_squares(stage.reduce(u), stage.count, stage.group, stage.size)
             np.add.at(parts.T, stage.stratum_of_group, (squares * stage.factor).T)
         return parts
@@ -174,7 +174,7 @@ class Design:
 
         The variance is the sum over primary units. In two-stage designs a cluster's part holds its second stage.
         """
-        first, *second = self._stages(cells)
+        first, *second = self.stages(cells)
         parts = first.factor[first.group] * _centred(first.reduce(u), first.count, first.group, first.size)[0] ** 2
         for stage in second:
             parts = parts + stage.factor * _centred_squares(u, stage.count, stage.group, stage.size)[0]
@@ -204,7 +204,7 @@ class Design:
     def covariance(self, u: sparse.csr_array, v: sparse.csr_array, cells: Cells) -> Floats:
         """Covariance, shape (p, q), of the totals behind the score rows `u` and `v`."""
         result = np.zeros((u.shape[0], v.shape[0]))
-        for stage in self._stages(cells):
+        for stage in self.stages(cells):
             left, right = (_centred(stage.reduce(w), stage.count, stage.group, stage.size) for w in (u, v))
             result += (left * (stage.count * stage.factor[stage.group])) @ right.T
         return result
@@ -216,7 +216,7 @@ class Design:
 
     def lonely(self, cells: Cells) -> tuple[Ints, Ints]:
         """Strata with one primary unit of several, and clusters with one labelled unit of several: no variance."""
-        first, *second = self._stages(cells)
+        first, *second = self.stages(cells)
         clusters = np.flatnonzero(np.isnan(second[0].factor)) if second else np.zeros(0, np.intp)
         return np.flatnonzero(np.isnan(first.factor) & (first.size > 0)), clusters
 
@@ -226,10 +226,6 @@ class Design:
         pairs = [(getattr(self, name), getattr(other, name)) for name in arrays]
         same = all(x is y or (x is not None and y is not None and np.array_equal(x, y)) for x, y in pairs)
         return same and (self.fpc, self.divisor) == (other.fpc, other.divisor)
-
-    def first_stage_factor(self, cells: Cells) -> Floats:
-        """Factor (1 - f) n / (n - 1) of each stratum's centred sum of squares, shape (H,)."""
-        return next(self._stages(cells)).factor
 
     # -- details -----------------------------------------------------------------------------------------
 
@@ -265,7 +261,8 @@ class Design:
         """Stratum within which the scores of each stratum are centred."""
         return np.arange(len(self.N)) if self.collapse is None else self.collapse
 
-    def _stages(self, cells: Cells) -> Iterator[_Stage]:
+    def stages(self, cells: Cells) -> Iterator[Stage]:
+        """Stages of selection, the first between primary units; a second one only where it adds variance."""
         merged = self._merged
         if self.M is None:
             size = self.stratum_count(cells)
@@ -282,15 +279,15 @@ class Design:
             with np.errstate(divide="ignore", invalid="ignore"):
                 first = (size / self.M)[clusters.stratum]
             factor = first * self._factor(labelled, clusters.units)
-            yield _Stage(lambda u: u, cells.count, cells.psu, labelled, factor, clusters.stratum)
+            yield Stage(lambda u: u, cells.count, cells.psu, labelled, factor, clusters.stratum)
 
     def _first_stage(
         self, reduce: Reduce, count: Floats, group: Ints, size: Floats, population: Floats, merged: Ints
-    ) -> _Stage:
+    ) -> Stage:
         strata = len(self.N)
         pooled_size, pooled_population = (_by_group(x, merged, strata) for x in (size, population))
         factor = self._factor(pooled_size, pooled_population)
-        return _Stage(reduce, count, group, pooled_size, factor, np.arange(strata))
+        return Stage(reduce, count, group, pooled_size, factor, np.arange(strata))
 
     def _factor(self, n: Floats, population: Floats) -> Floats:
         """(1 - f) n / (n - 1): what a centred sum of squares is multiplied with; NaN for one unit of several."""
@@ -313,7 +310,7 @@ class _Clusters:
 
 
 @dataclass(frozen=True, eq=False)
-class _Stage:
+class Stage:
     """One stage of selection: columns of scores, how many units each stands for, and how they are grouped."""
 
     reduce: Reduce

@@ -15,7 +15,7 @@ from scipy import sparse
 
 from change_assess.engine.cells import Floats
 from change_assess.engine.intervals import METHODS, Interval, check_level
-from change_assess.engine.linearise import Linearised, Part, Survey, common, lift
+from change_assess.engine.linearise import Linearised, Survey, common, lift
 from change_assess.errors import InputError, nearest
 
 
@@ -102,8 +102,11 @@ class Estimate:
         """Degrees of freedom: primary units minus strata."""
         return float(self.linear.survey.df(self.linear.scores)[0])
 
-    def interval(self, level: float | None = None, method: str = "normal") -> Interval:
+    def interval(self, level: float | None = None, method: str | None = None) -> Interval:
         """Limits at `level` (default: that of the result it came from).
+
+        The conventional limits, also where the table has exact ones. Where the sample shows no variance they are NaN,
+        unless a method is asked for by name.
 
         Raises
         ------
@@ -111,12 +114,16 @@ class Estimate:
             For an unknown method or a level outside (0.5, 1).
         """
         level = check_level(self.level if level is None else level)
+        flat = method is None and self.se == 0 and not isinstance(self.expression, Known)
+        method = method or "normal"
         if method not in METHODS:
             raise InputError(
                 f"there is no interval method '{method}' for a single estimate",
                 value=method,
                 mend=f"Use one of: {', '.join(METHODS)}.{nearest(method, METHODS)}",
             )
+        if flat:  # nothing seen to vary is no reason for x ± 0
+            return Interval(float("nan"), float("nan"), level, method)
         lower, upper = METHODS[method](np.asarray(self.value), np.asarray(self.se), np.asarray(self.df), level)
         return Interval(float(lower), float(upper), level, method)
 
@@ -172,7 +179,8 @@ class Estimate:
 
     def __repr__(self) -> str:
         lower, upper, level, _ = self.interval()
-        return f"Estimate({self.value:.6g}, se={self.se:.4g}, {level:.0%} interval {lower:.6g} to {upper:.6g})"
+        limits = f", {level:.0%} interval {lower:.6g} to {upper:.6g}" if np.isfinite(upper) else ", no normal interval"
+        return f"Estimate({self.value:.6g}, se={self.se:.4g}{limits})"
 
 
 def covariance(*estimates: Estimate) -> Floats:
@@ -188,8 +196,3 @@ def covariance(*estimates: Estimate) -> Floats:
         survey = common(survey, estimate.linear.survey)
     scores = sparse.csr_array(sparse.vstack([lift(e.linear, survey).scores for e in estimates]))
     return survey.covariance(scores, scores)
-
-
-def counts_for(part: Part, survey: Survey, count: Floats) -> Floats:
-    """Counts over the cells of `part`, given counts over the cells of the single-sample `survey` made from it."""
-    return survey.only.counts_of(part, count)

@@ -19,7 +19,7 @@ from typing import Any, NamedTuple
 import numpy as np
 from scipy import special
 
-from change_assess.engine.cells import Cells, Floats
+from change_assess.engine.cells import Cells, Floats, Ints
 from change_assess.engine.design import Design, indicator_of
 from change_assess.errors import InputError
 
@@ -108,29 +108,61 @@ def _first(accepts: Callable[[Floats], Any], low: Floats, high: Floats) -> Float
 def simulated_counts(design: Design, cells: Cells, rng: np.random.Generator, draws: int = DRAWS) -> Floats:
     """Counts of simulated samples, shape (draws, c), whose totals vary as the design's totals do.
 
-    Every primary unit gets a random multiplier of mean one: a Dirichlet law within its stratum (Rubin 1981, the
-    Bayesian bootstrap), its concentration set so that the variance of a total equals the design's first-stage
-    estimate, (1 - f) m/(m - 1) times the centred sum of squares. A stratum wholly sampled does not vary.
+    Every unit of each stage of selection gets a random multiplier of mean one: a Dirichlet law within its stratum or
+    cluster (Rubin 1981, the Bayesian bootstrap), its concentration set so that the variance of a total equals the
+    stage's estimate, (1 - f) n/(n - 1) times the centred sum of squares. What is wholly sampled does not vary.
     """
-    group = cells.stratum if cells.psu is None else cells.psu
-    weight = cells.count if cells.psu is None else np.ones(len(cells))
-    stratum = cells.stratum if design.M is None or design.cluster_stratum is None else design.cluster_stratum
-    size = design.primary_count(cells)
-    factor = np.nan_to_num(design.first_stage_factor(cells))
+    counts = np.asarray(cells.count)
+    for stage in design.stages(cells):
+        multiplier = _multipliers(stage.count, stage.group, stage.size, stage.factor, rng, draws)
+        columns = multiplier if len(stage.count) == len(cells) or cells.psu is None else multiplier[:, cells.psu]
+        counts = counts * columns
+    return counts
+
+
+def _multipliers(
+    count: Floats, group: Ints, size: Floats, factor: Floats, rng: np.random.Generator, draws: int
+) -> Floats:
+    """Mean multiplier of the units of each column, shape (draws, columns); one where nothing varies."""
+    factor = np.nan_to_num(factor)
     with np.errstate(divide="ignore", invalid="ignore"):
         shape = np.where(factor > 0, np.clip((size / factor - 1) / size, 0.02, None), np.inf)
-    units = cells.count if cells.psu is None else np.ones(len(stratum))
-    rate = shape[stratum] * units
-    fixed = ~np.isfinite(rate)
+    rate = shape[group] * count
+    fixed = ~np.isfinite(rate) | (count == 0)
     law = np.where(fixed, 1.0, rate)
     if law.min() > 0.5:  # single precision takes half the time, but small shapes underflow in it
         gamma = rng.standard_gamma(law.astype(np.float32), (draws, len(law)), np.float32).astype(float)
     else:
         gamma = np.maximum(rng.standard_gamma(law, (draws, len(law))), np.finfo(float).tiny)
-    gamma[:, fixed] = units[fixed]
-    total = np.asarray(gamma @ indicator_of(stratum, np.ones(len(stratum)), len(size)))
-    share = gamma / total[:, stratum] * size[stratum]
-    return np.asarray(share if cells.psu is None else share[:, group] * cells.count * weight)
+    gamma[:, fixed] = count[fixed]
+    total = np.asarray(gamma @ indicator_of(group, np.ones(len(group)), len(size)))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.where(fixed, 1.0, gamma / total[:, group] * size[group] / count)
+
+
+def zero_count_bound(area: Floats, n: Floats, level: float) -> float:
+    """Largest area of a class that, at `level`, could be there although no unit of any stratum showed it.
+
+    The maximum of sum(area p) over all stratum rates p whose chance of showing nothing, prod((1 - p)**n), is at
+    least 1 - level (one-sided; sampling with replacement, hence cautious in finite strata). At the maximum
+    1 - p = min(1, k n / area); the multiplier k is found by bisection in its logarithm.
+
+    Parameters
+    ----------
+    area, n : ndarray, shape (H,)
+        Area and sample size of each stratum, n > 0.
+    """
+
+    def rates(k: float) -> Floats:
+        return np.maximum(0.0, 1 - k * n / area)
+
+    low, high = 0.0, float((area / n).max())
+    for _ in range(200):
+        middle = (low + high) / 2
+        with np.errstate(divide="ignore"):
+            chance = float((n * np.log1p(-rates(middle))).sum())
+        low, high = (middle, high) if chance < np.log(1 - level) else (low, middle)
+    return float((area * rates(high)).sum())
 
 
 def quantiles(replicates: Floats, level: float) -> tuple[Floats, Floats]:

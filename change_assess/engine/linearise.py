@@ -119,7 +119,7 @@ def common(first: Survey, second: Survey) -> Survey:
 def _join(a: Part, b: Part) -> Part:
     if a is b:
         return a
-    left, right = a.cells.cell_of_unit, b.cells.cell_of_unit
+    left, right = a.cells.cell_by_unit_id, b.cells.cell_by_unit_id
     if left is None or right is None or not np.array_equal(left >= 0, right >= 0):
         raise DesignError(
             "Two estimates from one sample use different units, because labels are missing in one of them. "
@@ -279,6 +279,12 @@ class Linearised:
     def __neg__(self) -> Linearised:
         return _linear(np.multiply, self, -1.0, -1.0, 0.0)
 
+    def __abs__(self) -> Linearised:
+        return _absolute(self)
+
+    def __pow__(self, power: float) -> Linearised:
+        return _power(self, power)
+
     __radd__ = __add__
     __rmul__ = __mul__
 
@@ -325,6 +331,11 @@ def _exp(x: Linearised) -> Linearised:
     return _with(x, value, value)
 
 
+def _power(x: Linearised, power: float) -> Linearised:
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return _with(x, x.value**power, power * x.value ** (power - 1))
+
+
 def _with(x: Linearised, value: Floats, derivative: Floats) -> Linearised:
     factor = np.where(np.isfinite(derivative), derivative, 0.0).ravel()
     return Linearised(value, scale_rows(x.scores, factor), x.survey, x.kink)
@@ -352,6 +363,8 @@ RULES: dict[np.ufunc, Callable[..., Linearised]] = {
     np.negative: lambda x: -x,
     np.log: _log,
     np.exp: _exp,
+    np.power: _power,
+    np.sqrt: lambda x: _power(x, 0.5),
     np.absolute: _absolute,
     np.minimum: _minimum,
 }

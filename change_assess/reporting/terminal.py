@@ -173,9 +173,16 @@ def _show_worst_case(console: Console, result: Result) -> None:
     rows = rows[rows["depth"].isin(["label", "change-class", "change"])]
     if rows.empty:
         return
-    table = _new_table(["class", "period", "over", "at least", "at most"])
+    table = _new_table(["class", "table", "period", "over", "at least", "at most"])
     for row in _records(rows):
-        table.add_row(row["class"], row["period"], row["domain"], rounded(row["lower"], 1), rounded(row["upper"], 1))
+        table.add_row(
+            row["class"],
+            texts.DEPTHS[row["depth"]],
+            row["period"],
+            row["domain"],
+            rounded(row["lower"], 1),
+            rounded(row["upper"], 1),
+        )
     title = "Worst case for what has no label, hectares: none, or all, of it is of the class; sampling error included"
     _show(console, title, table)
 
@@ -260,7 +267,7 @@ def _with_limits(row: Row) -> str:
 
 
 def _percent(share: float) -> str:
-    return f"{100 * share:.3g} %" if math.isfinite(share) else "–"
+    return f"{100 * share:#.3g} %".replace(". %", " %") if math.isfinite(share) else "–"
 
 
 # -- tallies ----------------------------------------------------------------------------------------------

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from typing import Any
 
 from change_assess.errors import Notice
@@ -42,7 +42,12 @@ INTERVALS = {
     "worst-case": "none, or all, of what is not labelled is of the class; sampling error included",
 }
 
-_NOTICES: dict[str, str] = {
+NOTICES: dict[str, str] = {
+    "expansion-total": (
+        "Expansion totals: units weighted by N/n stand for {estimated_ha:,.1f} ha of {known_ha:,.1f} ha, so shares do "
+        "not add up to one."
+    ),
+    "change-classes-unused": "Change classes need two dates; with one label column they are not used.",
     "byte-order-mark": "{file} begins with a byte-order mark ({encoding}); it was read past.",
     "carriage-return-lines": "{file} ends lines with carriage returns alone; they were read as line ends.",
     "unsampled-strata-excluded": (
@@ -121,12 +126,7 @@ def notice_text(notice: Notice) -> str:
     KeyError
         For a code that has no wording: every code in the package has one, and a test says so.
     """
-    return _NOTICES[notice.code].format(**{k: _fact(v) for k, v in notice.facts.items()})
-
-
-def known_codes() -> set[str]:
-    """Codes that have a wording."""
-    return set(_NOTICES)
+    return NOTICES[notice.code].format(**{k: _fact(v) for k, v in notice.facts.items()})
 
 
 def _fact(value: Any) -> Any:
@@ -138,8 +138,3 @@ def _fact(value: Any) -> Any:
 def _listed(words: Sequence[str], most: int = 8) -> str:
     shown = ", ".join(words[:most])
     return shown if len(words) <= most else f"{shown} and {len(words) - most} more"
-
-
-def notice_facts(notice: Notice) -> Mapping[str, Any]:
-    """Facts of a notice as they stand in the JSON."""
-    return {"code": notice.code, **notice.facts}

@@ -11,12 +11,13 @@ import numpy as np
 import pandas as pd
 from numpy.typing import NDArray
 
+from change_assess.engine.cells import Floats
 from change_assess.engine.intervals import METHODS, check_level
 from change_assess.engine.linearise import Part, Survey
 from change_assess.errors import InputError, Notice, nearest
 from change_assess.legend import CHANGE, NO_CHANGE, ChangeClass, ChangeClasses, Legend, pair_name
 from change_assess.measures import Contrast
-from change_assess.results.population import EXCLUDE, Population, labelled_units, population_of, survey_of
+from change_assess.results.population import EXCLUDE, Population, Weighing, labelled_units, population_of, survey_of
 from change_assess.results.result import Key, Result
 from change_assess.results.rows import ContrastRows, IntervalChoice, worst_case
 from change_assess.samples import Sample, read_sample
@@ -99,6 +100,8 @@ def estimate(
         With one message that says what is wrong, where, and how to mend it.
     """
     check_level(level)
+    if not isinstance(seed, (int, np.integer)) or seed < 0:
+        raise InputError(f"{seed!r} is not a seed", value=seed, mend="Use a whole number, 0 or more.")
     if interval not in INTERVALS:
         raise InputError(
             f"there is no interval method '{interval}'",
@@ -113,22 +116,13 @@ def estimate(
     use = labelled_units(data, labels.reference)
     population = population_of(data, use, fpc=fpc, unsampled=unsampled)
     post = labels.post_columns(data) if post_stratify else None
-    survey = survey_of(
-        data,
-        population,
-        labels.all_codes,
-        use,
-        calibration=post,
-        estimator=estimator,
-        post_stratify=post_stratify,
-        legend=labels.legend,
-        collapse=collapse,
-    )
+    weighing = Weighing(estimator, post_stratify, tuple(collapse), labels.legend, post)
+    survey = survey_of(data, population, labels.all_codes, use, weighing)
     choice = IntervalChoice(level, interval, seed)
     build = _Builder(data, labels, recipes, population, choice, expansion=estimator == "expansion", kappa=kappa)
     build.run(survey)
     if not use.all() or population.unsampled_ha:
-        build.worst_cases(*_all_selected(data, labels, use, fpc))
+        build.worst_cases(*_all_selected(data, labels, use, fpc, weighing))
     resolved = {
         "map": {name: list(cols) for name, cols in labels.maps.items()},
         "reference": list(labels.references),
@@ -148,10 +142,12 @@ def estimate(
     return build.result(survey, resolved)
 
 
-def _all_selected(sample: Sample, labels: _Labels, use: NDArray[np.bool_], fpc: bool) -> tuple[Survey, Population]:
+def _all_selected(
+    sample: Sample, labels: _Labels, use: NDArray[np.bool_], fpc: bool, weighing: Weighing
+) -> tuple[Survey, Population]:
     """Survey of all selected units, labelled or not, of the strata that have any labelled one."""
     sampled = population_of(sample, use, fpc=fpc, unsampled=EXCLUDE)
-    return survey_of(sample, sampled, labels.all_codes, sampled.kept[sample.stratum]), sampled
+    return survey_of(sample, sampled, labels.all_codes, sampled.kept[sample.stratum], weighing), sampled
 
 
 # -- labels -----------------------------------------------------------------------------------------------
@@ -310,7 +306,7 @@ class _Builder:
         """Add the rows that say what the unlabelled units and the unsampled strata could hide."""
         for level in self.levels:
             contrast = replace(self._contrast(survey, "", level), known_area_ha=sampled.area_ha)
-            lower, upper = worst_case(contrast, self.choice.level)
+            lower, upper = self._with_reported(level, *worst_case(contrast, self.choice.level))
             domains = {"sampled strata": upper}
             if sampled.unsampled_ha:
                 domains["all strata"] = upper + sampled.unsampled_ha
@@ -332,6 +328,16 @@ class _Builder:
                     }
                 )
                 self.frames.append(_named(frame, Key("", level.reference, level.depth, level.period)))
+
+    def _with_reported(self, level: _Level, lower: Floats, upper: Floats) -> tuple[Floats, Floats]:
+        """Worst-case limits that hold those reported for the sampled strata, such as a zero-count bound."""
+        if (self.population.account["role"] == "assumed").any():
+            return lower, upper
+        table = pd.concat(self.frames)
+        mine = (table["measure"] == "area_ha") & (table["depth"] == level.depth) & (table["period"] == level.period)
+        reported = table[mine].drop_duplicates("class").set_index("class").loc[list(level.classes)]
+        least, most = (reported[c].to_numpy(float) for c in ("lower", "upper"))
+        return np.fmin(lower, np.clip(least, 0, None)), np.fmax(upper, most)
 
     def _unsampled(self) -> pd.DataFrame:
         """The lines that say how much area is excluded, or in the estimates by assumption only."""
@@ -471,6 +477,14 @@ class _Builder:
         same = folded[folded.str.casefold().duplicated(keep=False)].tolist()
         if same:
             self.notices.append(Notice("labels-differ-by-case", {"labels": same}))
+        if self.recipes.recipes and len(self.labels.dates) == 1:
+            self.notices.append(Notice("change-classes-unused"))
+        if self.expansion:
+            design = part.design
+            stands_for = float(((part.cells.count * part.cells.size_ha) * design.weights(part.cells)).sum())
+            if abs(stands_for - self.population.area_ha) > 1e-6 * self.population.area_ha:
+                facts = {"estimated_ha": stands_for, "known_ha": self.population.area_ha}
+                self.notices.append(Notice("expansion-total", facts))
         if self.kappa:
             self.notices.append(Notice("kappa"))
         self._area_notice()

@@ -217,23 +217,31 @@ def _account_notices(account: pd.DataFrame) -> list[Notice]:
     return notices
 
 
+@dataclass(frozen=True, eq=False)
+class Weighing:
+    """How units are weighed beyond their design: the estimator, post-strata, and strata pooled for the variance.
+
+    `classes` gives, by column name of the crossing table, the class of each unit: what post-strata are made of.
+    """
+
+    estimator: str = "combined"
+    post_stratify: str | None = None
+    collapse: tuple[str, ...] = ()
+    legend: Legend | None = None
+    classes: Mapping[str, NDArray[np.intp]] | None = None
+
+
 def survey_of(
     sample: Sample,
     population: Population,
     labels: NDArray[np.intp],
     use: NDArray[np.bool_],
+    weighing: Weighing,
     *,
-    calibration: Mapping[str, NDArray[np.intp]] | None = None,
-    estimator: str = "combined",
-    post_stratify: str | None = None,
-    legend: Legend | None = None,
-    collapse: Sequence[str] = (),
     compress: bool = True,
 ) -> Survey:
-    """Compress the units in `use`, with their `labels`, shape (n, L), and state the design.
-
-    `calibration` gives, by column name of the crossing table, the class of each unit: what post-strata are made of.
-    """
+    """Compress the units in `use`, with their `labels`, shape (n, L), and state the design."""
+    estimator, calibration = weighing.estimator, weighing.classes
     extra = np.stack(list(calibration.values()), axis=1) if calibration else np.zeros((sample.n, 0), np.intp)
     cells = Cells.from_units(
         sample.stratum,
@@ -241,6 +249,7 @@ def survey_of(
         population.size_ha,
         psu=sample.cluster,
         use=use,
+        order=sample.order,
         sample_id=sample.sample_id,
         compress=compress,
     )
@@ -255,17 +264,17 @@ def survey_of(
         cluster_units=None if clusters is None else clusters["units"].to_numpy(float),
         cluster_labelled=None if clusters is None else _labelled_by_cluster(sample, use),
         fpc=population.fpc,
-        collapse=_collapse(sample, collapse),
+        collapse=_collapse(sample, weighing.collapse),
     )
     if estimator not in ESTIMATORS:
         raise InputError(
             f"there is no estimator '{estimator}'", value=estimator, mend=f"Use one of: {', '.join(ESTIMATORS)}."
         )
-    if post_stratify is not None:
+    if weighing.post_stratify is not None:
         names = list(calibration or {})
         codes = {n: cells.labels[:, labels.shape[1] + i] for i, n in enumerate(names)}
-        assert legend is not None
-        adjust = _post_strata(sample, population, cells, codes, post_stratify, legend)
+        assert weighing.legend is not None
+        adjust = _post_strata(sample, population, cells, codes, weighing.post_stratify, weighing.legend)
         if estimator != "combined":
             raise DesignError(f"Post-stratification and the {estimator} estimator cannot be combined: choose one.")
         design = replace(design, adjust=adjust)
@@ -347,6 +356,7 @@ def _post_strata(
     if "stratum" in cross.frame.columns:
         keys = {"stratum": _strata_codes(sample), **keys}
         codes = {"stratum": cells.stratum, **codes}
+    _check_totals(sample, population, keys, totals, by_area=by_area)
     groups = [list(codes)] if how == "cells" else [["stratum"], *([n] for n in codes if n != "stratum")]
     columns, wanted = [], []
     for names in groups:
@@ -364,6 +374,36 @@ def _post_strata(
         return Calibration(auxiliary, np.concatenate(wanted), None, f"post-strata ({how}), units")
     size = np.where(cells.size_ha > 0, cells.size_ha, 1.0)
     return Calibration(auxiliary * size[:, None], np.concatenate(wanted), 1 / size, f"post-strata ({how}), area")
+
+
+def _check_totals(
+    sample: Sample,
+    population: Population,
+    keys: Mapping[str, NDArray[np.intp]],
+    totals: NDArray[np.float64],
+    *,
+    by_area: bool,
+) -> None:
+    """Refuse a crossing table that repeats a row or does not add up to the strata."""
+    cross = sample.crossing
+    assert cross is not None
+    rows = pd.DataFrame(keys)
+    for at in np.flatnonzero(rows.duplicated())[:1]:
+        raise InputError(
+            "the row stands twice", file=cross.file, row=cross.row(at), mend="Give each combination of classes one row."
+        )
+    known, noun = (population.A, "ha") if by_area else (population.N, "units")
+    strata = keys.get("stratum", np.zeros(len(totals), np.intp))
+    held = np.bincount(strata, totals, minlength=len(known)) if "stratum" in keys else np.array([totals.sum()])
+    wanted = known if "stratum" in keys else np.array([known.sum()])
+    for at in np.flatnonzero(np.abs(held - wanted) > 1e-6 * wanted)[:1]:
+        where = f"of stratum '{sample.strata['stratum'].iloc[at]}' " if "stratum" in keys else ""
+        raise InputError(
+            f"its rows {where}add up to {held[at]:,.12g} {noun}, the strata table says {wanted[at]:,.12g}",
+            file=cross.file,
+            column="area_ha" if by_area else "units",
+            mend="Post-stratification needs totals of the same population: correct one of the tables.",
+        )
 
 
 def population_has_units(sample: Sample) -> bool:

@@ -267,6 +267,8 @@ class Result:
             if key.map:
                 view = View(contrast, self.level)
                 name = files.slug("-".join(p for p in (key.map, key.depth, key.period) if p))
+                while folder / f"matrix-sample-counts-{name}.csv" in texts:
+                    name += "_"
                 for kind, matrix in (("sample-counts", view.counts()), ("area-shares", view.area_shares())):
                     matrix.index.name = "map \\ reference"
                     texts[folder / f"matrix-{kind}-{name}.csv"] = matrix.to_csv(lineterminator="\n")

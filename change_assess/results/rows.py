@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -22,6 +22,7 @@ from change_assess.measures import (
     Totals,
     area_ha,
     linearise,
+    unmapped_share,
 )
 
 ALL_PAIRS_UP_TO = 50
@@ -33,6 +34,9 @@ ROUNDING = 1e-15
 SIMULATED_NUMBERS = 400_000
 """Random numbers that one simulation may draw; the number of simulated samples follows, at least 400."""
 
+
+CAN_VANISH = ("quantity_disagreement", "shift")
+"""Measures that are zero at a kink within reach."""
 
 COMPLEMENTS = {"commission_error": "users_accuracy", "omission_error": "producers_accuracy"}
 """Measures that are one minus another, limits included."""
@@ -95,6 +99,8 @@ class ContrastRows:
         blocks = [self._block(name, self._by_class(name), classes, blank) for name in self._class_measures()]
         if self.has_map:
             overall = OVERALL | (ON_REQUEST if kappa else {})
+            if (self.contrast.map_class[self.part.cells.count > 0] < 0).any():
+                overall = overall | {"unmapped_share": unmapped_share}
             blocks += [self._block(name, self._overall(name, m), whole, whole) for name, m in overall.items()]
             blocks.append(self._joint_block())
         columns = {name: np.concatenate([block[name] for block in blocks]) for name in blocks[0]}
@@ -179,19 +185,24 @@ class ContrastRows:
         return self._simulate(name, measure, x, column) if x.kink.any() else column
 
     def _simulate(self, name: str, measure: Measure, x: Linearised, column: Column) -> Column:
-        """Limits from simulated samples where a measure is too near a kink to be linearised."""
+        """Limits from simulated samples where a measure is too near a kink to be linearised.
+
+        Percentiles of |x| never reach zero, though x may be zero: there the lower limit of what can vanish is zero.
+        """
         self.near_kink.append(name)
         near = np.atleast_1d(x.kink)
+        if self.part.design.collapse is not None:  # pooled strata have no sample size of their own to simulate with
+            nothing = np.where(near, np.nan, column.lower), np.where(near, np.nan, column.upper)
+            return replace(column, lower=nothing[0], upper=nothing[1], interval=np.where(near, "", column.interval))
         with np.errstate(divide="ignore", invalid="ignore"):
             replicates = np.asarray(measure(self._replicates()))
-        lower, upper = (_without_rounding(x) for x in intervals.quantiles(replicates, self.choice.level))
-        return Column(
-            column.value,
-            column.se,
-            np.where(near, np.atleast_1d(lower), column.lower),
-            np.where(near, np.atleast_1d(upper), column.upper),
-            np.where(near, "simulated", column.interval),
-            column.n,
+        lower, upper = (np.atleast_1d(_without_rounding(q)) for q in intervals.quantiles(replicates, self.choice.level))
+        if name in CAN_VANISH:
+            lower = np.zeros_like(lower)
+        lower, upper = np.fmin(lower, column.value), np.fmax(upper, column.value)
+        used = np.where(near & np.isfinite(upper), "simulated", np.where(near, "", column.interval))
+        return replace(
+            column, lower=np.where(near, lower, column.lower), upper=np.where(near, upper, column.upper), interval=used
         )
 
     def _replicates(self) -> Totals:
@@ -251,7 +262,7 @@ class ContrastRows:
         return self._zero_count(column, self.n_reference == 0, scale)
 
     def _stratum_of_map_class(self) -> NDArray[np.intp]:
-        """Stratum that is one map class, as far as the sample shows; -1 for classes that are not one stratum."""
+        """Stratum that is one map class, by the sample and, if known, by mapped area; -1 where none is."""
         cells = self.part.cells
         k, strata = len(self.contrast.classes), len(self.part.design.N)
         table = np.zeros((k + 1, strata))
@@ -259,6 +270,8 @@ class ContrastRows:
         alone = (table > 0).sum(axis=1)[:k] == 1
         stratum = table[:k].argmax(axis=1)
         whole = table[np.arange(k), stratum] == table.sum(axis=0)[stratum]
+        if self.known_map_ha is not None:
+            whole &= np.isclose(self.known_map_ha, self.part.design.A[stratum], rtol=1e-6)
         return np.where(alone & whole, stratum, -1)
 
     def _exact(
@@ -280,16 +293,16 @@ class ContrastRows:
         return Column(column.value, column.se, lower, upper, used, column.n)
 
     def _zero_count(self, column: Column, unseen: NDArray[np.bool_], scale: float) -> Column:
-        """One-sided bound of a class that was seen nowhere: the largest that one stratum could hide."""
+        """One-sided bound of a class that was seen nowhere: the most that could be there unseen."""
         if not unseen.any() or not self._plain():
             return column
         design, cells = self.part.design, self.part.cells
         n = design.stratum_count(cells)
-        has = n > 0
-        one_sided = 2 * self.choice.level - 1
-        size = design.N[has] if design.fpc else None
-        _, high = intervals.exact(np.zeros(int(has.sum())), n[has], size, one_sided)
-        bound = float((high * design.A[has] / design.A[has].sum()).max()) * scale
+        open_to_doubt = (n > 0) & ~(design.fpc & (n >= design.N))  # a stratum wholly sampled hides nothing
+        bound = 0.0
+        if open_to_doubt.any():
+            area = design.A[open_to_doubt]
+            bound = intervals.zero_count_bound(area, n[open_to_doubt], self.choice.level) / design.A.sum() * scale
         return Column(
             np.where(unseen, 0.0, column.value),
             column.se,
