@@ -134,14 +134,16 @@ def estimate(
     if study is not None:
         inputs["study"] = study
     carried = [found for text in options.get("influence") or () for found in _influences(result, text)]
+    written = []
+    if options.get("out"):  # before anything is printed, so that a fault leaves one line
+        written = result.save(options["out"], inputs)
+        for name, found in carried:
+            _save_influence(Path(options["out"]), name, found)
     if json:
         run.print_json(result.to_json(inputs))
     else:
         terminal.show_result(where, result, dict(carried))
-    if options.get("out"):
-        run.say_written(where, result.save(options["out"], inputs))
-        for name, found in carried:
-            _save_influence(Path(options["out"]), name, found)
+    run.say_written(where, written)
 
 
 def _estimated(options: dict[str, Any], *, quiet: bool) -> tuple[Any, dict[str, Any]]:

@@ -34,12 +34,12 @@ def tally(
     where = run.console(quiet=quiet or json)
     with run.progress("Tallying", quiet=quiet or json) as progress:
         result = run_tally(options["maps"], **_map_options(options), workers=options.get("workers"), progress=progress)
+    written = result.save(options["out"]) if options.get("out") else []
     if json:
         run.print_json(result.to_json())
     else:
         terminal.show_tally(where, result)
-    if options.get("out"):
-        run.say_written(where, result.save(options["out"]))
+    run.say_written(where, written)
 
 
 def stratify(

@@ -220,12 +220,20 @@ class Design:
         clusters = np.flatnonzero(np.isnan(second[0].factor)) if second else np.zeros(0, np.intp)
         return np.flatnonzero(np.isnan(first.factor) & (first.size > 0)), clusters
 
-    def same_sampling(self, other: Design) -> bool:
-        """Whether both state the same sampling; how weights are adjusted may differ."""
-        arrays = ("N", "A", "M", "cluster_stratum", "cluster_units", "cluster_labelled", "collapse")
-        pairs = [(getattr(self, name), getattr(other, name)) for name in arrays]
-        same = all(x is y or (x is not None and y is not None and np.array_equal(x, y)) for x, y in pairs)
-        return same and (self.fpc, self.divisor) == (other.fpc, other.divisor)
+    def same_sampling(self, cells: Cells, at: Ints, other: Design, other_cells: Cells, other_at: Ints) -> bool:
+        """Whether both state the same sampling of the same units; how weights are adjusted may differ.
+
+        `at` and `other_at` are cells that hold the same units; strata may be numbered differently.
+        """
+        if (self.fpc, self.divisor, self.M is None) != (other.fpc, other.divisor, other.M is None):
+            return False
+        mine, theirs = (
+            np.stack([x for x in (d.N, d.A, d.M) if x is not None])[:, c.stratum[i]]
+            for d, c, i in ((self, cells, at), (other, other_cells, other_at))
+        )
+        pooled, others = self._merged[cells.stratum[at]], other._merged[other_cells.stratum[other_at]]
+        pairs = set(zip(pooled.tolist(), others.tolist(), strict=True))
+        return bool(np.allclose(mine, theirs, rtol=1e-12)) and len(pairs) == len(set(pooled)) == len(set(others))
 
     # -- details -----------------------------------------------------------------------------------------
 

@@ -125,14 +125,14 @@ def _join(a: Part, b: Part) -> Part:
             "Two estimates from one sample use different units, because labels are missing in one of them. "
             "Estimate both in one call, so that they share their units."
         )
-    if not a.design.same_sampling(b.design):
+    use = left >= 0
+    distinct, at = np.unique(left[use] * len(b.cells) + right[use], return_inverse=True)
+    from_a, from_b = distinct // len(b.cells), distinct % len(b.cells)
+    if not a.design.same_sampling(a.cells, from_a, b.design, b.cells, from_b):
         raise DesignError(
             "Two estimates from one sample state different designs (finite population correction, collapsed strata or "
             "excluded strata), so their covariance is not defined. Estimate both in the same way."
         )
-    use = left >= 0
-    distinct, at = np.unique(left[use] * len(b.cells) + right[use], return_inverse=True)
-    from_a, from_b = distinct // len(b.cells), distinct % len(b.cells)
     cell_of_unit = np.full(len(left), -1, dtype=np.intp)
     cell_of_unit[use] = at
     cells = Cells(
