@@ -120,17 +120,20 @@ def read_sample(
     cross = None if crossing is None else read_table(crossing, "crossing table", required=["area_ha"], columns=columns)
     if cross is not None:
         _check_crossing(cross)
+    read = [units] + ([cross] if cross else [])
     if strata is None:
         frame, strata_file = _one_stratum(cross), cross.file if cross else "strata"
         notices: tuple[Notice, ...] = ()
     else:
         table = read_table(strata, "strata table", required=["stratum", "area_ha"], columns=columns)
         frame, strata_file, notices = _strata_frame(table), table.file, table.notices
+        read.append(table)
     stratum = _strata_of_units(units, frame, strata_file)
     area = units.numbers("area_ha") if "area_ha" in units.frame.columns else None
     cluster_frame, cluster = _read_clusters(clusters, units, frame, stratum, columns)
     kind = _design_kind(design, frame, cluster_frame, cluster)
     _check_population(frame, stratum, strata_file, cluster_frame)
+    _check_column_rules(columns or {}, read, clusters)
     order = _order_of_units(units)
     return Sample(
         units=units,
@@ -182,6 +185,21 @@ def _column_bytes(column: pd.Series[Any]) -> bytes:
 def _check_unit_ids(units: TextTable) -> None:
     units.refuse_blanks("unit", "a unit has no id", "Give it one.")
     units.refuse_repeats("unit", "Every unit needs an id of its own.")
+
+
+def _check_column_rules(columns: Mapping[str, str], read: list[TextTable], clusters: Table | None) -> None:
+    """Refuse a rule "ours=theirs" whose column stands in no table."""
+    if clusters is not None:
+        read = [*read, read_table(clusters, "clusters table", columns=columns)]
+    used = frozenset().union(*(t.renamed for t in read))
+    for ours, theirs in columns.items():
+        if ours not in used:
+            every = [str(c) for t in read for c in t.frame.columns]
+            raise InputError(
+                f"no table has a column '{theirs}', which was to be taken as '{ours}'",
+                column=theirs,
+                mend=f"Correct the name.{nearest(theirs, every)}",
+            )
 
 
 def _check_crossing(cross: TextTable) -> None:

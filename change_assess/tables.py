@@ -56,6 +56,7 @@ class TextTable:
     frame: pd.DataFrame
     file: str
     notices: tuple[Notice, ...] = ()
+    renamed: frozenset[str] = frozenset()
     _words: dict[str, tuple[NDArray[np.intp], list[str]]] = field(default_factory=dict, repr=False)
 
     def require(self, *names: str) -> None:
@@ -172,14 +173,17 @@ def read_table(
     else:
         table = TextTable(*read_csv(Path(source)))
     if columns:
-        table = TextTable(_rename(table, columns), table.file, table.notices)
+        frame, renamed = _rename(table, columns)
+        table = TextTable(frame, table.file, table.notices, renamed)
     table.require(*required)
     if table.frame.empty:
         raise InputError(f"the {what} has no rows", file=table.file, mend="Check that the right file was named.")
     return table
 
 
-def _rename(table: TextTable, columns: Mapping[str, str]) -> pd.DataFrame:
+def _rename(table: TextTable, columns: Mapping[str, str]) -> tuple[pd.DataFrame, frozenset[str]]:
+    """The frame under our column names, and which of ours stand in it by their name."""
+    found = frozenset(ours for ours, name in columns.items() if name in table.frame.columns)
     theirs = {name: ours for ours, name in columns.items() if name in table.frame.columns and name != ours}
     for name, ours in theirs.items():
         if ours in table.frame.columns:
@@ -189,7 +193,7 @@ def _rename(table: TextTable, columns: Mapping[str, str]) -> pd.DataFrame:
                 column=ours,
                 mend="Rename one of them in the file.",
             )
-    return table.frame.rename(columns=theirs)
+    return table.frame.rename(columns=theirs), found
 
 
 def _as_text(frame: pd.DataFrame, what: str) -> pd.DataFrame:

@@ -200,11 +200,12 @@ def _figures(
 ) -> list[figures.Figure]:
     place = folder / "figures"
     shown = comparison[comparison["class"].isin(["forest loss", "forest gain"])]
-    view = result.select(depth="change-class", period=f"{maps.dates[0]}-{maps.dates[1]}")
+    period = f"{maps.dates[0]}-{maps.dates[1]}"
+    view = result.select(depth="change-class", period=period)
     return [
         _map_figure(place / "maps_and_sample", maps, sample),
         figures.estimates_against_map(shown, place / "estimate_map_truth", level=result.level),
-        figures.matrix_heat(view.area_shares(), place / "matrix"),
+        figures.matrix_heat(view.area_shares(), place / "matrix", title=f"Change {period}"),
     ]
 
 

@@ -787,3 +787,10 @@ def test_a_crossing_table_that_does_not_fit_is_refused(files, crossing, match, p
         return estimate(sample, map="map", reference="ref", post_stratify="cells")
 
     refused(match, post_stratified, file="crossing.csv", **place)
+
+
+def test_a_column_rule_for_a_column_that_is_nowhere_is_refused(files):
+    """A misspelt name in "ours=theirs" is refused with the nearest column, not passed over."""
+    folder = files(SAMPLE), files(STRATA, "strata.csv")
+    with pytest.raises(InputError, match=r"no table has a column 'unti'.*Did you mean 'unit'"):
+        read_sample(*folder, columns={"unit": "unti"})

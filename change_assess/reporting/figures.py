@@ -570,7 +570,7 @@ def influence_bars(units: pd.DataFrame, strata: pd.DataFrame, path: str | Path, 
         return _save(sheet, path, alt)
 
 
-def matrix_heat(matrix: pd.DataFrame, path: str | Path) -> Figure:
+def matrix_heat(matrix: pd.DataFrame, path: str | Path, *, title: str = "") -> Figure:
     """Draw the joint map × reference matrix; rows are the map, columns the reference.
 
     Parameters
@@ -579,6 +579,8 @@ def matrix_heat(matrix: pd.DataFrame, path: str | Path) -> Figure:
         Estimated shares of the area (0–1); they add up to 1.
     path : path
         Where to write; the suffix is replaced by ``.svg`` and ``.png``.
+    title : str
+        What the matrix is of, for example classes and period.
 
     Returns
     -------
@@ -600,8 +602,8 @@ def matrix_heat(matrix: pd.DataFrame, path: str | Path) -> Figure:
         place = (left + room / 2) / (width + room), bottom / height
         axis = sheet.add_axes((*place, wide * columns / (width + room), 0.75 * wide * rows / height))
         _draw_matrix(axis, shares, names, turned=turned)
-        note = "Per cent of the area. Framed: map and reference agree."
-        sheet.text(0.5, 0.1 / height, note, fontsize=9, ha="center", va="bottom")
+        what = f"{title}, per cent of the area." if title else "Per cent of the area."
+        sheet.text(0.5, 0.1 / height, f"{what} Framed: agreement.", fontsize=9, ha="center", va="bottom")
         return _save(sheet, path, _matrix_alt(matrix))
 
 
