@@ -97,19 +97,19 @@ class Cells:
 
 def _group_rows(stratum: Ints, labels: Ints, size_ha: Floats, psu: Ints | None, taken: Ints) -> Ints:
     """Number the distinct rows from 0 (in sorted order, so the order of rows in the file does not matter)."""
-    columns = [stratum, *([] if psu is None else [psu]), *labels.T]
+    pick: Ints | slice = slice(None) if len(taken) == len(stratum) else taken
+    sizes = np.asarray(size_ha, float)[pick]
     code = np.zeros(len(taken), dtype=np.int64)
-    sizes = np.asarray(size_ha, float)[taken]
     if len(sizes) and sizes.min() != sizes.max():
         code = np.unique(sizes, return_inverse=True)[1].astype(np.int64)
     span = int(code.max(initial=0)) + 1
-    for column in columns:
-        values = column[taken].astype(np.int64) + 1  # -1, "no label", becomes 0
-        width = int(values.max(initial=0)) + 1
+    for column in (stratum, *([] if psu is None else [psu]), *labels.T):
+        values = column[pick]
+        width = int(values.max(initial=0)) + 2  # -1, "no label", becomes 0
         if span * width >= 2**62:
             code = np.unique(code, return_inverse=True)[1].astype(np.int64)
             span = int(code.max(initial=0)) + 1
-        code, span = code * width + values, span * width
+        code, span = code * width + (values + 1), span * width
     return _renumber(code, span)
 
 

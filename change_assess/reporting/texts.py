@@ -79,8 +79,9 @@ NOTICES: dict[str, str] = {
         "The labels {labels} differ by upper and lower case only; they count as different classes."
     ),
     "near-kink": (
-        "{measures}: some values lie within 2 SE of a point where they cannot be linearised. Their SE is left empty, "
-        "their limits come from simulated samples, and the estimates are biased upwards there."
+        "{measures}: some values lie within 2 SE of a point where they cannot be linearised. Their SE is left empty and "
+        "their limits come from simulated samples; there, quantity disagreement is biased upwards, allocation "
+        "disagreement and exchange downwards."
     ),
     "no-population-size": (
         "{file} gives areas but no numbers of units, so there is no finite population correction, and units weigh "

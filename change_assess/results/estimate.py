@@ -362,8 +362,8 @@ class _Builder:
         return _named(frame, Key("", ",".join(self.labels.references), "", ""))
 
     def result(self, survey: Survey, options: dict[str, Any]) -> Result:
-        self.frames.append(self._unsampled())
-        table = pd.concat(self.frames, ignore_index=True)
+        frames = [*self.frames, *([self._unsampled()] if self.population.unsampled_ha else [])]
+        table = pd.concat(frames, ignore_index=True) if len(frames) > 1 else frames[0]
         return Result(
             table=table[ESTIMATE_COLUMNS],
             contrasts=self.contrasts,
