@@ -79,7 +79,7 @@ NOTICES: dict[str, str] = {
         "The labels {labels} differ by upper and lower case only; they count as different classes."
     ),
     "near-kink": (
-        "{measures}: some values lie within 2 SE of a point where they cannot be linearised. Their SE is left empty and "
+        "{measures}: some values lie within 2 SE of a point where they cannot be linearised. Their SE is left empty, "
         "their limits come from simulated samples; there, quantity disagreement is biased upwards, allocation "
         "disagreement and exchange downwards."
     ),
