@@ -202,7 +202,8 @@ def _as_text(frame: pd.DataFrame, what: str) -> pd.DataFrame:
         raise InputError(f"two columns are called '{name}'", file=what, column=str(name), mend="Rename one.")
     for name in frame.columns:
         column = frame[name]
-        if pd.api.types.is_string_dtype(column) and not column.isna().any():
+        text_already = pd.api.types.is_string_dtype(column) and not isinstance(column.dtype, pd.CategoricalDtype)
+        if text_already and not column.isna().any():
             text[str(name)] = column.reset_index(drop=True)
         else:
             text[str(name)] = pd.Series([_cell_text(v) for v in column.tolist()], dtype=object)

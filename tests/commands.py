@@ -101,7 +101,7 @@ def as_flags(flags: dict[str, object]) -> list[object]:
 
 def estimates(folder: Path) -> pd.DataFrame:
     """Rows of `estimates.csv`, blanks of the key columns as empty texts."""
-    table = pd.read_csv(folder / "estimates.csv")
+    table = pd.read_csv(folder / "estimates.csv", float_precision="round_trip")
     keys = list(table.columns[:8])
     return table.astype(dict.fromkeys(keys, object)).fillna(dict.fromkeys(keys, "")).astype(dict.fromkeys(keys, str))
 

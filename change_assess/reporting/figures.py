@@ -30,7 +30,7 @@ from numpy.typing import NDArray
 
 from change_assess.errors import InputError
 from change_assess.files import replacing
-from change_assess.legend import NO_CHANGE, OTHER_CHANGE, Legend
+from change_assess.legend import NO_CHANGE, OTHER_CHANGE, OTHER_NO_CHANGE, Legend
 
 PALETTE = ("#D55E00", "#0072B2", "#E69F00", "#009E73", "#CC79A7", "#56B4E9", "#F0E442", "#000000")
 """Okabe and Ito (2008), strongest contrasts first."""
@@ -268,7 +268,7 @@ def _draw_changes(
 def _change_colours(names: Sequence[str]) -> dict[str, str]:
     """Strong colours for the named changes, greys for the rest."""
     free = iter(PALETTE * (1 + len(names)))
-    quiet = {NO_CHANGE: _PALE, OTHER_CHANGE: _GREY}
+    quiet = {NO_CHANGE: _PALE, OTHER_NO_CHANGE: _PALE, OTHER_CHANGE: _GREY}
     return {name: quiet.get(name) or next(free) for name in names}
 
 
@@ -314,17 +314,27 @@ def _stratum_colours(
 ) -> list[tuple[str, str, pd.Series]]:
     """Name, colour and members of each stratum drawn on its own; the smaller ones share grey if they are many.
 
-    A stratum named like a change class has its colour.
+    A stratum named like a change class, or like one and its first period, has its colour.
     """
     names = [str(n) for n in sizes.index]
     many = len(names) > _MOST_STRATA + 1
     largest = [str(n) for n in sizes.sort_values(ascending=False, kind="stable").index[:_MOST_STRATA]]
     own = [n for n in names if n in largest] if many else names
-    alike = _change_colours(change_names) | {NO_CHANGE: "#5A5A5A", OTHER_CHANGE: "#000000"}
-    fixed = {n: alike[n] for n in own if n in alike}
+    greys = {NO_CHANGE: "#5A5A5A", OTHER_NO_CHANGE: "#5A5A5A", OTHER_CHANGE: "#000000"}
+    colours = _change_colours(change_names)
+    fixed = {n: alike for n in own if (alike := (colours | greys).get(n) or _of_first_period(n, own, colours))}
     free = iter([c for c in PALETTE if c not in fixed.values()] * 2)
     drawn = [(n, fixed.get(n) or next(free), strata == n) for n in own]
     return [(f"{len(names) - len(own)} other strata", _GREY, ~strata.isin(own)), *drawn] if many else drawn
+
+
+def _of_first_period(name: str, names: Sequence[str], colours: Mapping[str, str]) -> str:
+    """Colour of a change class for the first of its strata by period ("forest loss 2016-2019"), else nothing."""
+    for change, colour in colours.items():
+        of_change = [n for n in names if n.startswith(f"{change} ")]
+        if of_change and of_change[0] == name:
+            return colour
+    return ""
 
 
 def _stack_keys(side: Axes, keys: Sequence[_Entries]) -> None:
