@@ -101,7 +101,10 @@ def as_flags(flags: dict[str, object]) -> list[object]:
 
 def estimates(folder: Path) -> pd.DataFrame:
     """Rows of `estimates.csv`, blanks of the key columns as empty texts."""
-    table = pd.read_csv(folder / "estimates.csv", float_precision="round_trip")
+    table = pd.read_csv(folder / "estimates.csv")
+    text = pd.read_csv(folder / "estimates.csv", dtype=str, keep_default_na=False)
+    for name in ("estimate", "se", "df", "lower", "upper"):  # to the last digit, whatever pandas' own reader does
+        table[name] = [float(v) if v else float("nan") for v in text[name]]
     keys = list(table.columns[:8])
     return table.astype(dict.fromkeys(keys, object)).fillna(dict.fromkeys(keys, "")).astype(dict.fromkeys(keys, str))
 
