@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 
 from change_assess.errors import DesignError, InputError, Notice, nearest
 from change_assess.legend import check_class_name
-from change_assess.tables import Table, TextTable, read_table
+from change_assess.tables import Table, TextTable, in_strict_order, read_table
 
 LABELLED, OUTSIDE = "labelled", "outside"
 STATUS = {
@@ -130,10 +130,12 @@ def read_sample(
         read.append(table)
     stratum = _strata_of_units(units, frame, strata_file)
     area = units.numbers("area_ha") if "area_ha" in units.frame.columns else None
-    cluster_frame, cluster = _read_clusters(clusters, units, frame, stratum, columns)
+    of_clusters = None if clusters is None else _read_clusters_table(clusters, columns)
+    read += [of_clusters] if of_clusters else []
+    cluster_frame, cluster = _clusters_of_units(of_clusters, units, frame, stratum)
     kind = _design_kind(design, frame, cluster_frame, cluster)
     _check_population(frame, stratum, strata_file, cluster_frame)
-    _check_column_rules(columns or {}, read, clusters)
+    _check_column_rules(columns or {}, read)
     order = _order_of_units(units)
     return Sample(
         units=units,
@@ -158,8 +160,7 @@ PLACE_COLUMNS = ("unit", "stratum", "cluster", "x", "y", "longitude", "latitude"
 def _order_of_units(units: TextTable) -> NDArray[np.intp] | None:
     """Rows in the order of their unit ids; None if they stand in it already."""
     ids = units.frame["unit"]
-    before, after = ids.iloc[:-1].reset_index(drop=True), ids.iloc[1:].reset_index(drop=True)
-    return None if (after > before).all() else np.asarray(ids.argsort(kind="stable"), dtype=np.intp)
+    return None if in_strict_order(ids) else np.asarray(ids.argsort(kind="stable"), dtype=np.intp)
 
 
 def _sample_id(units: TextTable, order: NDArray[np.intp] | None) -> str:
@@ -187,10 +188,8 @@ def _check_unit_ids(units: TextTable) -> None:
     units.refuse_repeats("unit", "Every unit needs an id of its own.")
 
 
-def _check_column_rules(columns: Mapping[str, str], read: list[TextTable], clusters: Table | None) -> None:
+def _check_column_rules(columns: Mapping[str, str], read: list[TextTable]) -> None:
     """Refuse a rule "ours=theirs" whose column stands in no table."""
-    if clusters is not None:
-        read = [*read, read_table(clusters, "clusters table", columns=columns)]
     used = frozenset().union(*(t.renamed for t in read))
     for ours, theirs in columns.items():
         if ours not in used:
@@ -244,14 +243,16 @@ def _strata_of_units(units: TextTable, strata: pd.DataFrame, strata_file: str) -
     return np.array([known[w] for w in words], dtype=np.intp)[codes]
 
 
-def _read_clusters(
-    source: Table | None,
-    units: TextTable,
-    strata: pd.DataFrame,
-    stratum: NDArray[np.intp],
-    columns: Mapping[str, str] | None,
+def _read_clusters_table(source: Table, columns: Mapping[str, str] | None) -> TextTable:
+    table = read_table(source, "clusters table", required=["stratum", "cluster", "units"], columns=columns)
+    table.refuse_repeats("cluster", "Give each selected cluster one row, and an id that is unique over all strata.")
+    return table
+
+
+def _clusters_of_units(
+    table: TextTable | None, units: TextTable, strata: pd.DataFrame, stratum: NDArray[np.intp]
 ) -> tuple[pd.DataFrame | None, NDArray[np.intp] | None]:
-    if source is None:
+    if table is None:
         if "cluster" in units.frame.columns:
             raise InputError(
                 "the sample has a column 'cluster' but there is no table of the selected clusters",
@@ -261,8 +262,6 @@ def _read_clusters(
             )
         return None, None
     units.require("cluster")
-    table = read_table(source, "clusters table", required=["stratum", "cluster", "units"], columns=columns)
-    table.refuse_repeats("cluster", "Give each selected cluster one row, and an id that is unique over all strata.")
     frame = pd.DataFrame({"cluster": table.frame["cluster"].astype(str).str.strip()})
     frame["stratum"] = _strata_of_units(table, strata, "the strata table")
     frame["units"] = table.numbers("units", whole=True)

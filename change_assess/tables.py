@@ -104,7 +104,7 @@ class TextTable:
     def refuse_word(self, name: str, word: str, what: str, mend: str) -> NoReturn:
         """Refuse a text of a column, naming the first row that holds it."""
         at = int(np.flatnonzero(np.asarray(self.frame[name].str.strip() == word))[0])
-        raise InputError(what, file=self.file, row=self.row(at), column=name, value=word, mend=mend)
+        self.refuse_word_at(name, at, what, mend)
 
     def refuse_blanks(self, name: str, what: str, mend: str) -> None:
         """Refuse a column in which nothing stands in some row."""
@@ -114,8 +114,7 @@ class TextTable:
     def refuse_repeats(self, name: str, mend: str) -> None:
         """Refuse a column in which a text stands twice."""
         texts = self.frame[name].str.strip()
-        before, after = texts.iloc[:-1].reset_index(drop=True), texts.iloc[1:].reset_index(drop=True)
-        if (after > before).all():  # in strict order: none can stand twice
+        if in_strict_order(texts):  # none can stand twice
             return
         for at in np.flatnonzero(np.asarray(texts.duplicated()))[:1]:
             first = int(np.flatnonzero(np.asarray(texts == texts.iloc[at]))[0])
@@ -140,6 +139,12 @@ class TextTable:
             return codes, stripped
         unique = list(dict.fromkeys(stripped))
         return np.array([unique.index(w) for w in stripped], dtype=np.intp)[codes], unique
+
+
+def in_strict_order(texts: pd.Series[Any]) -> bool:
+    """Whether each text comes after the one before it."""
+    before, after = texts.iloc[:-1].reset_index(drop=True), texts.iloc[1:].reset_index(drop=True)
+    return bool((after > before).all())
 
 
 def read_table(

@@ -17,7 +17,7 @@ from scipy import sparse
 
 from change_assess.engine.cells import Cells, Floats, Ints
 
-_BLOCK_NUMBERS = 2_000_000
+BLOCK_NUMBERS = 2_000_000
 """Counts held at a time where many samples are looked at, to bound memory."""
 
 NEGLIGIBLE = 1e-13
@@ -187,7 +187,7 @@ class Design:
         the rest of its stratum weighs accordingly more.
         """
         total = len(cells)
-        for start in range(0, total, step := max(1, _BLOCK_NUMBERS // total)):
+        for start in range(0, total, step := max(1, BLOCK_NUMBERS // total)):
             block = np.arange(start, min(start + step, total))
             counts = np.repeat(cells.count[None, :], len(block), axis=0)
             if cells.psu is None:

@@ -304,9 +304,11 @@ class _Builder:
 
     def worst_cases(self, survey: Survey, sampled: Population) -> None:
         """Add the rows that say what the unlabelled units and the unsampled strata could hide."""
+        table = pd.concat(self.frames)
+        areas = table[table["measure"] == "area_ha"]
         for level in self.levels:
             contrast = replace(self._contrast(survey, "", level), known_area_ha=sampled.area_ha)
-            lower, upper = self._with_reported(level, *worst_case(contrast, self.choice.level))
+            lower, upper = self._with_reported(areas, level, *worst_case(contrast, self.choice.level))
             domains = {"sampled strata": upper}
             if sampled.unsampled_ha:
                 domains["all strata"] = upper + sampled.unsampled_ha
@@ -329,13 +331,12 @@ class _Builder:
                 )
                 self.frames.append(_named(frame, Key("", level.reference, level.depth, level.period)))
 
-    def _with_reported(self, level: _Level, lower: Floats, upper: Floats) -> tuple[Floats, Floats]:
+    def _with_reported(self, areas: pd.DataFrame, level: _Level, lower: Floats, upper: Floats) -> tuple[Floats, Floats]:
         """Worst-case limits that hold those reported for the sampled strata, such as a zero-count bound."""
         if (self.population.account["role"] == "assumed").any():
             return lower, upper
-        table = pd.concat(self.frames)
-        mine = (table["measure"] == "area_ha") & (table["depth"] == level.depth) & (table["period"] == level.period)
-        reported = table[mine].drop_duplicates("class").set_index("class").loc[list(level.classes)]
+        mine = (areas["depth"] == level.depth) & (areas["period"] == level.period)
+        reported = areas[mine].drop_duplicates("class").set_index("class").loc[list(level.classes)]
         least, most = (reported[c].to_numpy(float) for c in ("lower", "upper"))
         return np.fmin(lower, np.clip(least, 0, None)), np.fmax(upper, most)
 

@@ -14,6 +14,7 @@ import pandas as pd
 from numpy.typing import NDArray
 
 from change_assess.engine.cells import Cells, Floats, Ints
+from change_assess.engine.design import BLOCK_NUMBERS
 from change_assess.engine.intervals import exact, normal
 from change_assess.engine.linearise import Survey
 from change_assess.measures import AREAS, BY_CLASS, OVERALL, Contrast, Measure, linearise
@@ -174,7 +175,7 @@ def _moves(
     variants, at = np.unique(np.stack([cell, new]), axis=1, return_inverse=True)
     wider = _with_variants(contrast, variants)
     total = len(cells) + variants.shape[1]
-    step = max(1, 2_000_000 // total)
+    step = max(1, BLOCK_NUMBERS // total)
     for start in range(0, len(cell), step):
         block = slice(start, start + step)
         counts = np.zeros((len(cell[block]), total))
@@ -265,7 +266,8 @@ def _hidden(contrast: Contrast, index: int, mapped_ha: float | None, level: floa
     )
     size = design.N[kept] if design.fpc and design.M is None else None
     _, upper = exact(np.zeros(len(kept)), n[kept], size, 2 * level - 1)
-    one = _one_more(contrast, index, kept)
+    becoming = _becoming(contrast, index)
+    one = _one_more(becoming, index, kept)
     area = float(linearise(BY_CLASS["area_ha"], contrast).value[index])
     with np.errstate(divide="ignore", invalid="ignore"):
         double = np.where(area > 0, np.ceil(area / one), np.nan)
@@ -276,13 +278,16 @@ def _hidden(contrast: Contrast, index: int, mapped_ha: float | None, level: floa
         "one_unit_ha": one,
         "hidden_ha": np.where((seen == 0) & (design.M is None), upper * design.A[kept], np.nan),
         "omissions_to_double": double,
-        "omissions_to_lose_map": np.array([_to_lose_map(contrast, index, int(h), mapped_ha, level) for h in kept]),
+        "omissions_to_lose_map": np.array([_to_lose_map(becoming, index, int(h), mapped_ha, level) for h in kept]),
     }
 
 
-def _one_more(contrast: Contrast, index: int, strata: Ints) -> Floats:
+Becoming = tuple[Contrast, Ints, Ints]
+
+
+def _one_more(becoming: Becoming, index: int, strata: Ints) -> Floats:
     """Hectares that one unit of the class adds in each stratum: the estimate with one more, minus the estimate."""
-    wider, cell, variant = _becoming(contrast, index)
+    wider, cell, variant = becoming
     part = wider.survey.only
     counts = np.repeat(part.cells.count[None, :], len(strata) + 1, axis=0)
     for row, stratum in enumerate(strata, start=1):
@@ -297,7 +302,7 @@ def _one_more(contrast: Contrast, index: int, strata: Ints) -> Floats:
     return np.where(np.isnan(counts[1:, 0]), np.nan, areas[1:] - areas[0])
 
 
-def _becoming(contrast: Contrast, index: int) -> tuple[Contrast, Ints, Ints]:
+def _becoming(contrast: Contrast, index: int) -> Becoming:
     """Contrast with an empty twin, labelled as the class, of every cell that is not; the cells and their twins."""
     cells = contrast.survey.only.cells
     cell = np.flatnonzero((cells.count > 0) & (contrast.reference_class >= 0) & (contrast.reference_class != index))
@@ -305,9 +310,9 @@ def _becoming(contrast: Contrast, index: int) -> tuple[Contrast, Ints, Ints]:
     return wider, cell, len(cells) + np.arange(len(cell))
 
 
-def _to_lose_map(contrast: Contrast, index: int, stratum: int, mapped_ha: float, level: float) -> float:
+def _to_lose_map(becoming: Becoming, index: int, stratum: int, mapped_ha: float, level: float) -> float:
     """Fewest additional omissions in a stratum that put the mapped area below the interval; NaN if none up to 50."""
-    wider, cell, variant = _becoming(contrast, index)
+    wider, cell, variant = becoming
     part = wider.survey.only
     here = np.flatnonzero(part.cells.stratum[cell] == stratum)
     most = int(min(part.cells.count[cell[here]].sum(), MOST_OMISSIONS))
