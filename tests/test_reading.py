@@ -7,6 +7,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
+from commands import LEGEND, SAMPLE, STRATA
 
 from change_assess.errors import ChangeAssessError, DesignError, FileError, InputError
 from change_assess.results.estimate import estimate
@@ -14,19 +15,6 @@ from change_assess.results.result import Result
 from change_assess.samples import read_matrix, read_sample
 from change_assess.tables import read_legend, read_table
 
-SAMPLE = """unit,stratum,map,ref
-u1,loss,loss,loss
-u2,loss,loss,stable
-u3,loss,loss,loss
-u4,stable,stable,stable
-u5,stable,stable,loss
-u6,stable,stable,stable
-u7,stable,stable,stable
-"""
-STRATA = """stratum,units,area_ha
-loss,100,9.5
-stable,900,85.25
-"""
 CLUSTERED = """unit,stratum,cluster,map,ref
 u1,all,c1,a,a
 u2,all,c1,a,b
@@ -35,7 +23,6 @@ u4,all,c2,b,b
 """
 CLUSTER_STRATA = "stratum,units,clusters,area_ha\nall,80,40,80\n"
 CLUSTERS = "stratum,cluster,units\nall,c1,2\nall,c2,2\n"
-LEGEND = "code,name\n1,loss\n2,stable\n"
 
 
 @pytest.fixture
